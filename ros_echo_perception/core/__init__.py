@@ -1,0 +1,1 @@
+"""Echo perception without ROS: NumPy and SciPy, float seconds, radians and metres."""

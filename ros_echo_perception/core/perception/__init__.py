@@ -1,0 +1,1 @@
+"""From a raw two-eared echo to detections. Read pipeline.py first."""

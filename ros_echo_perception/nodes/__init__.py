@@ -1,0 +1,1 @@
+"""ROS 2 nodes: parameters, topics and conversion around the core."""

@@ -1,0 +1,1 @@
+"""Offline commands on recordings and bags; no ROS running."""
