@@ -1,0 +1,1 @@
+"""The demonstration: a simulated robot drives through a room with the real nodes over DDS."""

@@ -1,0 +1,122 @@
+"""A node that records every topic into a bag and tells the monitor what it sees."""
+
+from __future__ import annotations
+
+import importlib
+import threading
+import time
+from collections.abc import Callable
+from typing import Any
+
+import numpy as np
+from rclpy.node import Node
+from rclpy.qos import DurabilityPolicy, QoSProfile, ReliabilityPolicy
+from rclpy.serialization import deserialize_message
+
+from ..core.types import Pose2
+from ..offline.bag_reader import DETECTIONS, ODOMETRY, RAW_ECHO, odometry_from_message, stamp_s
+from ..offline.bag_writer import BagWriter, quality
+from .monitor import Monitor, SeenDetection, SeenMap
+
+OCCUPANCY = "nav_msgs/msg/OccupancyGrid"
+_DISCOVERY_PERIOD_S = 0.1
+_QUEUE_DEPTH = 200  # 8 s of pings: the disk may stall, the record must not
+
+
+class Recorder(Node):
+    """Subscribes to every topic as soon as somebody publishes it.
+
+    Messages go into the bag as they came, undecoded. ``lock`` guards the monitor, which is read
+    from another thread.
+    """
+
+    def __init__(self, bag: BagWriter, monitor: Monitor) -> None:
+        super().__init__("demo_recorder")
+        self._bag = bag
+        self._monitor = monitor
+        self.lock = threading.Lock()
+        self._handlers: dict[str, Callable[[Any, float], None]] = {
+            RAW_ECHO: self._on_raw,
+            DETECTIONS: self._on_detections,
+            OCCUPANCY: self._on_map,
+            ODOMETRY: self._on_odometry,
+        }
+        self._subscribed: set[str] = set()
+        self.create_timer(_DISCOVERY_PERIOD_S, self._discover)
+        self._discover()
+
+    def expect(self, topic: str, type_name: str, reliable: bool = True) -> None:
+        """Subscribe before the topic exists, so that not even its first message is missed."""
+        self._subscribe(topic, type_name, reliable, keep_last_sample=False)
+
+    def _discover(self) -> None:
+        for topic, types in self.get_topic_names_and_types():
+            if topic in self._subscribed or len(types) != 1:
+                continue
+            profiles = [i.qos_profile for i in self.get_publishers_info_by_topic(topic)]
+            if profiles:
+                reliable = all(p.reliability == ReliabilityPolicy.RELIABLE for p in profiles)
+                kept = all(p.durability == DurabilityPolicy.TRANSIENT_LOCAL for p in profiles)
+                self._subscribe(topic, types[0], reliable, kept)
+
+    def _subscribe(
+        self, topic: str, type_name: str, reliable: bool, keep_last_sample: bool
+    ) -> None:
+        self._subscribed.add(topic)
+        self._bag.add_topic(topic, type_name, quality(reliable, keep_last_sample))
+        policy = ReliabilityPolicy.RELIABLE if reliable else ReliabilityPolicy.BEST_EFFORT
+        durability = (
+            DurabilityPolicy.TRANSIENT_LOCAL if keep_last_sample else DurabilityPolicy.VOLATILE
+        )
+        profile = QoSProfile(depth=_QUEUE_DEPTH, reliability=policy, durability=durability)
+        message_type = _message_class(type_name)
+        handler = self._handlers.get(type_name)
+
+        def receive(data: bytes) -> None:
+            received_ns = time.time_ns()
+            self._bag.write(topic, received_ns, data)
+            if handler is not None:
+                message = deserialize_message(data, message_type)
+                with self.lock:
+                    handler(message, received_ns * 1e-9)
+
+        self.create_subscription(message_type, topic, receive, profile, raw=True)
+
+    def _on_raw(self, message: Any, received_s: float) -> None:
+        self._monitor.on_raw(message.sequence, message.front_end_flags, received_s)
+
+    def _on_detections(self, message: Any, received_s: float) -> None:
+        detections = [
+            SeenDetection(
+                d.range_m, d.bearing_rad, d.range_sigma_m, d.bearing_sigma_rad,
+                d.existence_probability, d.ears == d.EARS_BOTH,
+            )
+            for d in message.detections
+        ]  # fmt: skip
+        self._monitor.on_detections(
+            message.sequence, stamp_s(message), message.processing_time_s, detections, received_s
+        )
+
+    def _on_map(self, message: Any, received_s: float) -> None:
+        info = message.info
+        self._monitor.on_map(
+            SeenMap(
+                data=np.array(message.data, np.int8).reshape(info.height, info.width),
+                resolution_m=float(info.resolution),
+                origin_x_m=float(info.origin.position.x),
+                origin_y_m=float(info.origin.position.y),
+                frame=message.header.frame_id,
+            )
+        )
+
+    def _on_odometry(self, message: Any, received_s: float) -> None:
+        sample = odometry_from_message(message)
+        self._monitor.on_odometry(
+            sample.time_s, Pose2(sample.pose.x_m, sample.pose.y_m, sample.pose.yaw_rad)
+        )
+
+
+def _message_class(type_name: str) -> Any:
+    """The Python class of ``package/msg/Name``."""
+    package, _, name = type_name.split("/")
+    return getattr(importlib.import_module(f"{package}.msg"), name)

@@ -1,0 +1,98 @@
+"""Settings from YAML files: the nodes' own parameter files, or plain names and values."""
+
+from __future__ import annotations
+
+import dataclasses
+from collections.abc import Mapping, Sequence
+from pathlib import Path
+from typing import Any, TypeVar
+
+import yaml
+
+from ..core.errors import FileFormatError, refuse
+from ..core.settings import Settings, describe, from_mapping
+
+SettingsT = TypeVar("SettingsT", bound=Settings)
+
+
+def load_settings(path: str | Path | None, section: str, cls: type[SettingsT]) -> SettingsT:
+    """Settings of one stage; the defaults when no file is given.
+
+    Parameters
+    ----------
+    path
+        One of: a mapping of names to values; a mapping with a key ``section``; a ROS 2 parameter
+        file with a node of that name (its parameters that are not settings of the stage, such as
+        frames and topics, are left alone).
+    section
+        ``processing`` or ``mapping``.
+
+    Raises
+    ------
+    FileFormatError, SettingError
+        Naming the file, the setting, the value and what is allowed.
+    """
+    if path is None:
+        return cls()
+    data = load_yaml(path)
+    ros = _ros_parameters(data, section)
+    if ros is not None:
+        known = {info.name for info in describe(cls)}
+        return from_mapping(cls, {k: v for k, v in ros.items() if k in known}, str(path))
+    if isinstance(data.get(section), Mapping):
+        data = data[section]
+    return from_mapping(cls, data, str(path))
+
+
+def load_yaml(path: str | Path) -> dict[str, Any]:
+    """The mapping in a YAML file; an empty file is an empty mapping."""
+    try:
+        data = yaml.safe_load(Path(path).read_text())
+    except OSError as error:
+        raise FileFormatError(f"{path}: cannot be read ({error.strerror or error}).") from None
+    except (yaml.YAMLError, UnicodeDecodeError) as error:
+        raise FileFormatError(f"{path}: is not YAML ({error}).") from None
+    if data is None:
+        return {}
+    if not isinstance(data, Mapping):
+        raise FileFormatError(
+            refuse("content", data, "a mapping of names to values", file=str(path))
+        )
+    return dict(data)
+
+
+def _ros_parameters(data: Mapping[str, Any], node: str) -> Mapping[str, Any] | None:
+    """The parameters of a node; None when this is no parameter file at all."""
+    nodes = {k: v for k, v in data.items() if isinstance(v, Mapping) and "ros__parameters" in v}
+    if not nodes:
+        return None
+    merged: dict[str, Any] = {}
+    for name, value in nodes.items():
+        if name == "/**" or name.rsplit("/", 1)[-1] == node:
+            merged.update(value["ros__parameters"] or {})
+    return merged
+
+
+def save_used(path: Path, command: str, sections: Mapping[str, Settings],
+              inputs: Mapping[str, Sequence[str]]) -> None:  # fmt: skip
+    """Write the settings that made a result beside it; `load_settings` reads them back."""
+    data: dict[str, Any] = {"command": command}
+    data.update({name: list(values) for name, values in inputs.items()})
+    for name, settings in sections.items():
+        data[name] = {
+            key: list(value) if isinstance(value, tuple) else value
+            for key, value in dataclasses.asdict(settings).items()
+        }
+    header = "# Settings that made the file beside this one.\n"
+    path.write_text(header + yaml.safe_dump(data, sort_keys=False))
+
+
+def settings_path(out: Path) -> Path:
+    """Where the settings beside a result go.
+
+    Examples
+    --------
+    >>> settings_path(Path("run/detections.csv")).name
+    'detections.settings.yaml'
+    """
+    return out.with_name(out.stem + ".settings.yaml")
