@@ -45,7 +45,7 @@ def speed_of_sound(
     Examples
     --------
     >>> round(speed_of_sound(20.0, 0.5), 2)
-    344.0
+    343.99
     """
     _check_air(temperature_c, relative_humidity)
     t, p, xc = temperature_c, pressure_pa, _CO2_MOLE_FRACTION

@@ -15,7 +15,7 @@ from typing import Any
 
 import yaml
 
-from .errors import FileFormatError, refuse
+from .fields import Fields, read_yaml
 
 
 @dataclass(frozen=True)
@@ -85,19 +85,12 @@ def load_head(path: str | Path) -> Head:
     FileFormatError
         Naming the file, the field, the value and what is allowed.
     """
-    path = Path(path)
-    try:
-        data = yaml.safe_load(path.read_text())
-    except OSError as error:
-        raise FileFormatError(f"{path}: cannot be read ({error.strerror or error}).") from None
-    except (yaml.YAMLError, UnicodeDecodeError) as error:
-        raise FileFormatError(f"{path}: is not YAML ({error}).") from None
-    return head_from_mapping(data, str(path))
+    return head_from_mapping(read_yaml(path), str(path))
 
 
 def head_from_mapping(data: Any, file: str = "head") -> Head:
     """A head from the contents of a head file; errors as in `load_head`."""
-    fields = _Fields(data, file)
+    fields = Fields(data, file)
     waveform = fields.text("drive_waveform", WAVEFORMS)
     receivers = fields.section("receivers")
     carrier_hz = fields.number("carrier_hz", 1e3, 1e6)
@@ -112,7 +105,7 @@ def head_from_mapping(data: Any, file: str = "head") -> Head:
         gain_mismatch_db=fields.number("gain_mismatch_db", -60.0, 60.0, 0.0),
         latency_s=fields.number("latency_s", -1e-2, 1e-2, 0.0),
         phase_mismatch_rad=fields.number("phase_mismatch_rad", -math.pi, math.pi, 0.0),
-        calibration=fields.data.get("calibration") or {},
+        calibration=fields.section("calibration").data if fields.has("calibration") else {},
     )
 
 
@@ -133,62 +126,10 @@ def save_head(head: Head, path: str | Path) -> None:
     Path(path).write_text(comment + yaml.safe_dump(head_to_mapping(head), sort_keys=False))
 
 
-class _Fields:
-    """Checked access to a section of a head file."""
-
-    def __init__(self, data: Any, file: str, prefix: str = "") -> None:
-        if not isinstance(data, Mapping):
-            raise FileFormatError(
-                refuse(prefix.rstrip(".") or "content", data, "a mapping of names to values",
-                       file=file)
-            )
-        self.data, self.file, self.prefix = data, file, prefix
-
-    def refuse(self, name: str, value: Any, allowed: str) -> FileFormatError:
-        return FileFormatError(refuse(self.prefix + name, value, allowed, file=self.file))
-
-    def get(self, name: str, allowed: str) -> Any:
-        if name not in self.data:
-            raise self.refuse(name, "missing", allowed)
-        return self.data[name]
-
-    def number(self, name: str, low: float, high: float, default: float | None = None) -> float:
-        allowed = f"a number from {low:g} to {high:g}"
-        if default is not None and name not in self.data:
-            return default
-        value = self.get(name, allowed)
-        if isinstance(value, bool) or not isinstance(value, int | float):
-            raise self.refuse(name, value, allowed)
-        if not low <= value <= high:
-            raise self.refuse(name, value, allowed)
-        return float(value)
-
-    def text(self, name: str, choices: tuple[str, ...] = ()) -> str:
-        allowed = "one of " + ", ".join(choices) if choices else "a text"
-        value = self.get(name, allowed)
-        if not isinstance(value, str) or (choices and value not in choices):
-            raise self.refuse(name, value, allowed)
-        return value
-
-    def vector(self, name: str, limit: float) -> tuple[float, float, float]:
-        allowed = f"three numbers from -{limit:g} to {limit:g}"
-        value = self.get(name, allowed)
-        if not isinstance(value, list | tuple) or len(value) != 3:
-            raise self.refuse(name, value, allowed)
-        for item in value:
-            if isinstance(item, bool) or not isinstance(item, int | float) or abs(item) > limit:
-                raise self.refuse(name, value, allowed)
-            if not math.isfinite(item):
-                raise self.refuse(name, value, allowed)
-        return float(value[0]), float(value[1]), float(value[2])
-
-    def section(self, name: str) -> _Fields:
-        return _Fields(self.get(name, "a section"), self.file, f"{self.prefix}{name}.")
-
-
-def _transducer(fields: _Fields) -> Transducer:
+def _transducer(fields: Fields) -> Transducer:
+    x, y, z = fields.numbers("position_m", 3, -2.0, 2.0)
     return Transducer(
-        position_m=fields.vector("position_m", 2.0),
+        position_m=(x, y, z),
         yaw_rad=fields.number("yaw_rad", -math.pi / 2, math.pi / 2),
         half_power_beam_width_rad=fields.number("half_power_beam_width_rad", 0.02, math.pi),
         resonance_hz=fields.number("resonance_hz", 1e3, 1e6),
