@@ -1,0 +1,143 @@
+"""Settings of the mapping: window, sensor model, fading, poses."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from ..errors import SettingError, refuse
+from ..settings import Settings, setting
+
+NEVER_CLEAR, CLEAR_TO_RANGE = "never_clear", "clear_to_range"
+
+
+@dataclass(frozen=True)
+class MappingConfig(Settings):
+    """How detections and odometry become a local occupancy grid."""
+
+    resolution_m: float = setting(0.05, "Side of a cell", "m", 0.01, 1.0, read_only=True)
+    width_m: float = setting(
+        8.0, "Width of the window along x, robot in its middle", "m", 0.5, 200.0, read_only=True
+    )
+    height_m: float = setting(
+        8.0, "Height of the window along y, robot in its middle", "m", 0.5, 200.0, read_only=True
+    )
+    max_range_m: float = setting(5.0, "Echoes from further away are not used", "m", 0.2, 30.0)
+    min_existence_probability: float = setting(
+        0.5, "Echoes less likely than this are not used", "", 0.0, 1.0
+    )
+    hit_gain: float = setting(
+        8.0,
+        "Likelihood ratio gained by a cell that alone can explain an echo; cells that share it "
+        "gain in proportion",
+        "",
+        0.1,
+        100.0,
+    )
+    max_hit_log_odds: float = setting(
+        0.55,
+        "One ping raises a cell by at most this; below log(0.65 / 0.35) a single ping never "
+        "makes a cell occupied",
+        "",
+        0.01,
+        0.61,
+    )
+    free_log_odds: float = setting(
+        0.12, "One ping lowers a cell that the sound crossed by at most this", "", 0.0, 0.61
+    )
+    free_half_width_m: float = setting(
+        0.05, "An echo clears its path to this distance on either side", "m", 0.0, 0.5
+    )
+    min_log_odds: float = setting(-2.0, "A free cell's log-odds stop here", "", -20.0, -0.1)
+    max_log_odds: float = setting(3.5, "An occupied cell's log-odds stop here", "", 0.7, 20.0)
+    soft_lateral_sigma_m: float = setting(
+        0.15,
+        "An echo whose place across the line of sight is less certain than this (1 sigma) needs "
+        "agreement from another place of the head before it can make a cell occupied",
+        "m",
+        0.01,
+        2.0,
+    )
+    soft_max_probability: float = setting(
+        0.6, "Uncertain echoes from one place raise a cell no further than this", "", 0.5, 0.645
+    )
+    confirm_distance_m: float = setting(
+        0.15, "Two places of the head count as different from this distance", "m", 0.01, 2.0
+    )
+    multipath_weight: float = setting(
+        0.3, "Weight of an echo that is suspected to be a second bounce", "", 0.0, 1.0
+    )
+    silence_policy: str = setting(
+        NEVER_CLEAR,
+        "What silence says: nothing (never_clear), or that the beam is free up to clear_range_m "
+        "(clear_to_range; removes smooth walls seen at a slant)",
+        choices=(NEVER_CLEAR, CLEAR_TO_RANGE),
+    )
+    clear_range_m: float = setting(
+        1.0, "Silence clears the beam up to this range, where the policy says so", "m", 0.05, 10.0
+    )
+    occupied_decay_s: float = setting(
+        120.0, "Time constant with which occupied cells fade; 0: they do not", "s", 0.0, 1e6
+    )
+    free_decay_s: float = setting(
+        60.0, "Time constant with which free cells fade; 0: they do not", "s", 0.0, 1e6
+    )
+    max_pose_gap_s: float = setting(
+        0.2, "Poses are interpolated over gaps of the odometry up to this long", "s", 0.001, 10.0
+    )
+    max_pose_wait_s: float = setting(
+        1.0, "A ping waits this long for the odometry around it, then it is skipped", "s", 0.0, 60.0
+    )
+    settle_s: float = setting(
+        0.05,
+        "A ping waits this long for earlier pings of other heads, so that the order of arrival "
+        "does not change the map",
+        "s",
+        0.0,
+        5.0,
+    )
+    max_pending_pings: int = setting(200, "At most this many pings wait", "", 1, 100_000)
+    max_speed_m_s: float = setting(
+        5.0, "Odometry that moves faster than this has jumped", "m/s", 0.01, 100.0
+    )
+    max_turn_rad_s: float = setting(
+        10.0, "Odometry that turns faster than this has jumped", "rad/s", 0.01, 1000.0
+    )
+    time_restart_s: float = setting(
+        1.0,
+        "Odometry older than the newest by more than this means that time has restarted: poses, "
+        "waiting pings and map are cleared",
+        "s",
+        0.0,
+        1e6,
+    )
+    covariance_span_s: float = setting(
+        10.0,
+        "The growth of the odometry's covariance over this time widens the echoes; 0: it does not",
+        "s",
+        0.0,
+        600.0,
+    )
+
+    def check_together(self) -> None:
+        """The window must hold at least a few cells and not too many."""
+        for name in ("width_m", "height_m"):
+            cells = getattr(self, name) / self.resolution_m
+            if not 4 <= cells <= 8192:
+                raise SettingError(
+                    refuse(
+                        name,
+                        getattr(self, name),
+                        f"4 to 8192 cells of resolution_m = {self.resolution_m:g} m",
+                        "change the window or the resolution",
+                    )
+                )
+
+    @property
+    def width_cells(self) -> int:
+        """Cells along x."""
+        return round(self.width_m / self.resolution_m)
+
+    @property
+    def height_cells(self) -> int:
+        """Cells along y."""
+        return round(self.height_m / self.resolution_m)

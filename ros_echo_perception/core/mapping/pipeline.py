@@ -1,0 +1,288 @@
+"""The whole way from detections and odometry to a local map, as named steps. Read this first."""
+
+from __future__ import annotations
+
+import enum
+import math
+from collections import Counter
+from collections.abc import Iterable, Mapping
+
+import numpy as np
+
+from ..errors import OdometryGapError, SettingError, refuse
+from ..types import Detection, FloatArray, OdometrySample, PingFlag, PingResult, Pose2
+from . import sensor_model
+from .config import CLEAR_TO_RANGE, MappingConfig
+from .grid import IntArray, MapSnapshot, RollingGrid
+from .hypotheses import hypotheses_of, is_valid
+from .pending import PendingPings, WaitingPing
+from .poses import PoseBuffer, PoseOutcome
+from .update import GridUpdater
+
+_DEAF = (
+    PingFlag.LEFT_CLIPPED | PingFlag.RIGHT_CLIPPED | PingFlag.LEFT_DEAD | PingFlag.RIGHT_DEAD
+    | PingFlag.OFFSET_DRIFT | PingFlag.INTERFERENCE
+)  # fmt: skip
+_SILENT_MARGIN_M = 0.15
+
+
+class MapOutcome(enum.Enum):
+    """What became of a ping."""
+
+    QUEUED = "queued"
+    FUSED = "fused"
+    SKIPPED_NO_ODOMETRY = "skipped_no_odometry"
+    DROPPED_QUEUE_FULL = "dropped_queue_full"
+    DROPPED_TIME_RESTARTED = "dropped_time_restarted"
+    UNKNOWN_HEAD = "unknown_head"
+    INVALID = "invalid_ping"
+    LATE = "late"
+
+
+class LocalMapper:
+    """Fuses pings of one or several heads into a window around the robot.
+
+    Pings wait for the odometry around them and are used in the order of emission, whatever
+    the order in which they come, so the same messages give the same map, bit for bit; no
+    clock is read. If the odometry's time restarts or its pose jumps, the map is cleared: the
+    old cells would stand in a frame that no longer exists.
+
+    Parameters
+    ----------
+    config
+        Settings.
+    mounts
+        Pose of each head's reference point in base_link, by head id.
+
+    Attributes
+    ----------
+    counts
+        How often each outcome has occurred, by name (values of `MapOutcome`,
+        `PoseOutcome`, ``detections_used``, ``detections_invalid``, ``map_cleared``).
+
+    Examples
+    --------
+    >>> mapper = LocalMapper(MappingConfig(), {"front": Pose2(0.1, 0.0, 0.0)})
+    >>> mapper.add_odometry(OdometrySample(0.0, Pose2())).value
+    'odometry_added'
+    >>> mapper.snapshot().data.shape
+    (160, 160)
+    """
+
+    def __init__(self, config: MappingConfig, mounts: Mapping[str, Pose2]) -> None:
+        if not mounts:
+            raise SettingError(refuse("mounts", {}, "at least one head", "give its mount pose"))
+        for head_id, mount in mounts.items():
+            if not all(map(math.isfinite, (mount.x_m, mount.y_m, mount.yaw_rad))):
+                raise SettingError(refuse(f"mount of {head_id}", mount, "finite numbers"))
+        self.config = config
+        self.mounts = dict(mounts)
+        self.counts: Counter[str] = Counter()
+        self.grid = RollingGrid(config.width_cells, config.height_cells, config.resolution_m)
+        self._updater = GridUpdater(self.grid, config)
+        self._poses = PoseBuffer(
+            config.max_pose_gap_s,
+            config.max_speed_m_s,
+            config.max_turn_rad_s,
+            config.time_restart_s,
+        )
+        self._pending = PendingPings(config.max_pending_pings)
+        self._revision = 0
+        self._map_time_s = math.nan
+
+    # ------------------------------------------------------------------ what comes in
+    def add_odometry(self, sample: OdometrySample) -> PoseOutcome:
+        """Take one odometry sample and fuse the pings that waited for it; never raises."""
+        outcome = self._poses.add(sample)
+        self.counts[outcome.value] += 1
+        if outcome in (PoseOutcome.RESTARTED, PoseOutcome.JUMPED):
+            self.clear()
+        if outcome is PoseOutcome.RESTARTED:
+            limit_s = sample.time_s + self.config.time_restart_s
+            dropped = self._pending.drop_later_than(limit_s)
+            self.counts[MapOutcome.DROPPED_TIME_RESTARTED.value] += dropped
+        self._work(self.config.settle_s)
+        return outcome
+
+    def add_ping(self, head_id: str, result: PingResult) -> MapOutcome:
+        """Take the detections of one ping; they are fused as soon as their odometry is there.
+
+        Never raises; what cannot be used is counted.
+        """
+        outcome = self._queue(head_id, result)
+        self.counts[outcome.value] += 1
+        self._work(self.config.settle_s)
+        return outcome
+
+    def flush(self) -> None:
+        """Fuse what can be fused without waiting for other heads, at the end of a recording."""
+        self._work(0.0)
+
+    def clear(self) -> None:
+        """Forget the map; poses and waiting pings stay."""
+        self.grid.clear()
+        self.counts["map_cleared"] += 1
+        self._map_time_s = math.nan
+        self._revision += 1
+
+    def snapshot(self) -> MapSnapshot:
+        """The map as it is now, faded to the newest ping in it."""
+        config, (x, y) = self.config, self.grid.origin_m
+        time_s = self._map_time_s
+        data = self.grid.occupancy(
+            0.0 if math.isnan(time_s) else time_s, config.occupied_decay_s, config.free_decay_s
+        )
+        return MapSnapshot(data, config.resolution_m, x, y, time_s, self._revision)
+
+    @property
+    def revision(self) -> int:
+        """Revision of the map without making a snapshot."""
+        return self._revision
+
+    @property
+    def pending(self) -> int:
+        """Pings that wait for odometry."""
+        return len(self._pending)
+
+    # ------------------------------------------------------------------ waiting
+    def _queue(self, head_id: str, result: PingResult) -> MapOutcome:
+        if head_id not in self.mounts:
+            return MapOutcome.UNKNOWN_HEAD
+        if not _is_valid_ping(result):
+            return MapOutcome.INVALID
+        if result.emission_time_s < self._map_time_s:
+            self.counts[MapOutcome.LATE.value] += 1
+        end_s = result.emission_time_s + 2.0 * self.config.max_range_m / result.speed_of_sound_m_s
+        fits = self._pending.push(head_id, result, end_s)
+        return MapOutcome.QUEUED if fits else MapOutcome.DROPPED_QUEUE_FULL
+
+    def _work(self, settle_s: float) -> None:
+        while ping := self._pending.pop_ready(self._poses.newest_time_s - settle_s):
+            self.counts[self._fuse(ping).value] += 1
+        now_s = max(self._pending.newest_time_s, self._poses.newest_time_s)
+        while self._pending.pop_expired(now_s, self.config.max_pose_wait_s):
+            self.counts[MapOutcome.SKIPPED_NO_ODOMETRY.value] += 1
+
+    # ------------------------------------------------------------------ the algorithm
+    def _fuse(self, ping: WaitingPing) -> MapOutcome:
+        result, time_s = ping.result, ping.emission_time_s
+        detections = self._usable(result)
+        try:
+            emission, heads = self._head_poses(ping, detections)
+        except OdometryGapError:
+            return MapOutcome.SKIPPED_NO_ODOMETRY
+        moved = self.grid.centre_on(*self._robot_position(time_s))
+        growth = self._poses.variance_growth(time_s, self.config.covariance_span_s)
+        hits, free = self._evidence(detections, heads, growth, result, time_s)
+        free = self._with_silence(free, emission, result, detections)
+        touched = self._updater.apply(hits, free, (emission.x_m, emission.y_m), time_s)
+        self._map_time_s = max(
+            time_s, -math.inf if math.isnan(self._map_time_s) else self._map_time_s
+        )
+        self._revision += int(moved or touched)
+        self.counts["detections_used"] += len(detections)
+        return MapOutcome.FUSED
+
+    def _usable(self, result: PingResult) -> list[Detection]:
+        valid = [d for d in result.detections if is_valid(d)]
+        self.counts["detections_invalid"] += len(result.detections) - len(valid)
+        return [
+            d
+            for d in valid
+            if d.range_m <= self.config.max_range_m
+            and d.existence_probability >= self.config.min_existence_probability
+        ]
+
+    def _robot_position(self, time_s: float) -> tuple[float, float]:
+        pose = self._poses.pose_at(time_s)
+        return pose.x_m, pose.y_m
+
+    def _head_poses(
+        self, ping: WaitingPing, detections: list[Detection]
+    ) -> tuple[Pose2, FloatArray]:
+        """The head at emission, and for each echo (n, 3) where it counts from.
+
+        The measured range is half the way out and back, so it counts, to first order in the
+        motion, from the middle between the head's places at emission and at reception. The
+        bearing is that of the wave as it comes in: it counts from the heading at reception.
+        """
+        mount, result = self.mounts[ping.head_id], ping.result
+        flight_s = np.array([0.0] + [2.0 * d.range_m for d in detections])
+        flight_s /= result.speed_of_sound_m_s
+        base = self._poses.poses_at(ping.emission_time_s + flight_s)
+        c, s = np.cos(base[:, 2]), np.sin(base[:, 2])
+        x = base[:, 0] + c * mount.x_m - s * mount.y_m
+        y = base[:, 1] + s * mount.x_m + c * mount.y_m
+        yaw = base[:, 2] + mount.yaw_rad
+        heads = np.stack([0.5 * (x[0] + x[1:]), 0.5 * (y[0] + y[1:]), yaw[1:]], axis=1)
+        return Pose2(float(x[0]), float(y[0]), float(yaw[0])), heads
+
+    def _evidence(
+        self,
+        detections: list[Detection],
+        heads: FloatArray,
+        growth: tuple[float, float, float],
+        result: PingResult,
+        time_s: float,
+    ) -> tuple[tuple[IntArray, FloatArray, FloatArray], tuple[IntArray, FloatArray]]:
+        """Masses of occupied evidence (firm, soft) and weights of free evidence, by cell."""
+        config, grid = self.config, self.grid
+        possible = hypotheses_of(detections, heads, growth, config)
+        arcs = sensor_model.arc_samples(possible, config.resolution_m)
+        paths = sensor_model.path_samples(
+            possible, config.resolution_m, result.range_min_m, config.free_half_width_m
+        )
+        arc_cells = grid.locate(arcs.x_m, arcs.y_m)
+        path_cells = grid.locate(paths.samples.x_m, paths.samples.y_m)
+        in_the_way = self._updater.read(path_cells, time_s)
+        clear = sensor_model.clear_view(possible, paths, in_the_way)
+        shared = sensor_model.share_by_odds(arcs, possible, self._updater.read(arc_cells, time_s))
+        mass = shared * clear[arcs.owner]
+        soft = possible.soft[arcs.owner]
+        free = paths.samples.weight * clear[paths.samples.owner]
+        return (arc_cells, np.where(soft, 0.0, mass), np.where(soft, mass, 0.0)), (path_cells, free)
+
+    def _with_silence(
+        self,
+        free: tuple[IntArray, FloatArray],
+        emission: Pose2,
+        result: PingResult,
+        detections: list[Detection],
+    ) -> tuple[IntArray, FloatArray]:
+        """Add what silence says, where the policy lets it say anything."""
+        if self.config.silence_policy != CLEAR_TO_RANGE or result.flags & _DEAF:
+            return free
+        nearest_m = min((d.range_m for d in detections), default=math.inf) - _SILENT_MARGIN_M
+        x, y = sensor_model.silent_samples(
+            emission,
+            result.beam_half_width_rad,
+            result.range_min_m,
+            min(self.config.clear_range_m, result.range_max_m, nearest_m),
+            self.config.resolution_m,
+        )
+        cells = self.grid.locate(x, y)
+        return np.concatenate([free[0], cells]), np.concatenate([free[1], np.ones(cells.size)])
+
+
+def _is_valid_ping(result: PingResult) -> bool:
+    numbers = (
+        result.emission_time_s,
+        result.speed_of_sound_m_s,
+        result.range_min_m,
+        result.range_max_m,
+        result.beam_half_width_rad,
+    )
+    return all(map(math.isfinite, numbers)) and result.speed_of_sound_m_s > 1.0
+
+
+def run_mapper(
+    mapper: LocalMapper, events: Iterable[OdometrySample | tuple[str, PingResult]]
+) -> MapSnapshot:
+    """Feed odometry and (head id, ping) events in any reasonable order; the map at the end."""
+    for event in events:
+        if isinstance(event, OdometrySample):
+            mapper.add_odometry(event)
+        else:
+            mapper.add_ping(*event)
+    mapper.flush()
+    return mapper.snapshot()

@@ -1,0 +1,182 @@
+"""What an echo says of the cells: one of those at its distance reflects, those before are free.
+
+Occupied. A detection is one reflector in exactly one of the cells that its range and bearing
+allow. The density over range and bearing is integrated over the cells: each gets a mass, all
+masses of a detection add up to its existence probability. A cell's likelihood ratio is
+``1 + hit_gain * mass``: certain bearings raise few cells much, arcs raise many cells little.
+
+Sharing. Given what the map knows, the cells do not compete on equal terms: if exactly one of
+them is the cause, its posterior is proportional to mass times prior odds. So an echo that an
+occupied cell explains adds little to the rest of its arc (the remedy of [1]_ for cells
+updated independently, here one ping at a time).
+
+Free. A received echo proves that sound travelled to the reflector and back along its bearing:
+the cells on that path, and only those, are lowered, by the probability that the path really
+crosses them. If an occupied cell stands in the way, either it is wrong or the echo has bounced
+more than once; both the echo's weight and its free path shrink by that cell's probability.
+
+Silence says nothing, unless the policy says otherwise.
+
+References
+----------
+.. [1] S. Thrun, "Learning occupancy grid maps with forward sensor models", Autonomous Robots
+   15, 2003, 111-127.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.special import erf
+
+from ..types import FloatArray, Pose2
+from .grid import GridArray, IntArray
+from .hypotheses import Hypotheses
+
+_SPAN_SIGMAS = 2.5
+_MAX_ARC_SAMPLES = 1023
+_MIN_RANGE_SIGMA_CELLS = 0.25
+_MARGIN_CELLS = 1.5
+_BLOCK_MARGIN_M = 0.2
+
+
+@dataclass(frozen=True)
+class Samples:
+    """Points with weights; ``owner`` is the hypothesis each belongs to, ascending."""
+
+    owner: IntArray
+    x_m: FloatArray
+    y_m: FloatArray
+    weight: FloatArray
+
+
+@dataclass(frozen=True)
+class Paths:
+    """Points along the paths of the sound; ``middle`` marks those on the very line."""
+
+    samples: Samples
+    distance_m: FloatArray
+    middle: NDArray[np.bool_]
+
+
+def arc_samples(hypotheses: Hypotheses, resolution_m: float) -> Samples:
+    """Points every half cell over each hypothesis, weights adding up to its weight."""
+    h = hypotheses
+    range_sigma = np.hypot(h.range_sigma_m, _MIN_RANGE_SIGMA_CELLS * resolution_m)
+    range_span = _SPAN_SIGMAS * range_sigma
+    bearing_span = np.where(h.uniform, h.spread_rad, _SPAN_SIGMAS * h.spread_rad)
+    n_range = _count(2.0 * range_span, resolution_m)
+    n_bearing = _count(2.0 * bearing_span * h.range_m, resolution_m)
+    owner, k = _ragged(n_range * n_bearing)
+    across, along = k % n_bearing[owner], k // n_bearing[owner]
+    u = -1.0 + 2.0 * along / (n_range[owner] - 1)
+    v = -1.0 + 2.0 * across / (n_bearing[owner] - 1)
+    exponent = u**2 + np.where(h.uniform[owner], 0.0, v**2)
+    density = np.exp(-0.5 * _SPAN_SIGMAS**2 * exponent)
+    total = np.bincount(owner, density, len(h))
+    distance = np.maximum((h.range_m[owner]) + u * range_span[owner], 0.0)
+    angle = (h.head_yaw_rad + h.bearing_rad)[owner] + v * bearing_span[owner]
+    return Samples(
+        owner,
+        h.head_x_m[owner] + distance * np.cos(angle),
+        h.head_y_m[owner] + distance * np.sin(angle),
+        density * (h.weight / total)[owner],
+    )
+
+
+def path_samples(
+    hypotheses: Hypotheses, resolution_m: float, range_min_m: float, half_width_m: float
+) -> Paths:
+    """Points every cell along the paths of the firm hypotheses, from the nearest measurable
+    range to shortly before the reflector; weight = probability that the path crosses there.
+
+    Nearer than the nearest measurable range nothing is cleared: what the head cannot hear
+    there is kept.
+    """
+    h = hypotheses
+    end = h.range_m - np.maximum(3.0 * h.range_sigma_m, _MARGIN_CELLS * resolution_m)
+    n_along = np.floor((end - range_min_m) / resolution_m).astype(np.int64) + 1
+    n_along = np.where(h.soft | (n_along < 0), 0, n_along)
+    n_across = 2 * int(np.ceil(half_width_m / resolution_m)) + 1
+    owner, k = _ragged(n_along * n_across)
+    across, along = k % n_across - n_across // 2, k // n_across
+    distance = range_min_m + along * resolution_m
+    offset = across * (half_width_m / max(n_across // 2, 1))
+    angle = (h.head_yaw_rad + h.bearing_rad)[owner]
+    c, s = np.cos(angle), np.sin(angle)
+    lateral_sigma = np.maximum(distance * h.spread_rad[owner], 1e-9)
+    crossing = erf(np.maximum(half_width_m, 0.5 * resolution_m) / lateral_sigma / np.sqrt(2.0))
+    samples = Samples(
+        owner,
+        h.head_x_m[owner] + distance * c - offset * s,
+        h.head_y_m[owner] + distance * s + offset * c,
+        crossing * h.weight[owner],
+    )
+    return Paths(samples, distance, across == 0)
+
+
+def clear_view(
+    hypotheses: Hypotheses, paths: Paths, log_odds: FloatArray | GridArray
+) -> FloatArray:
+    """For each hypothesis the probability that nothing known stands in its way.
+
+    One minus how much the most occupied cell on the line to it exceeds "unknown":
+    ``1 - max(0, 2 p - 1)``; near the reflector itself nothing counts as in the way.
+    """
+    clear = np.ones(len(hypotheses))
+    owner = paths.samples.owner
+    counts = paths.middle & (paths.distance_m < hypotheses.range_m[owner] - _BLOCK_MARGIN_M)
+    # 2 p - 1 = tanh(log-odds / 2).
+    blocked = np.maximum(np.tanh(0.5 * log_odds[counts]), 0.0)
+    np.minimum.at(clear, owner[counts], 1.0 - blocked)
+    return clear
+
+
+def share_by_odds(
+    samples: Samples, hypotheses: Hypotheses, log_odds: FloatArray | GridArray
+) -> FloatArray:
+    """Weights of the samples after competition by prior odds within each detection."""
+    odds = np.exp(log_odds)
+    group = hypotheses.detection[samples.owner]
+    size = int(hypotheses.detection[-1]) + 1 if len(hypotheses) else 0
+    before = np.bincount(group, samples.weight, size)
+    raised = samples.weight * odds
+    after = np.bincount(group, raised, size)
+    scale = np.divide(before, after, out=np.zeros(size), where=after > 0.0)
+    return np.asarray(raised * scale[group])
+
+
+def silent_samples(
+    head: Pose2, half_width_rad: float, from_m: float, to_m: float, resolution_m: float
+) -> tuple[FloatArray, FloatArray]:
+    """Points half a cell apart that fill a sector of the beam; two arrays x, y."""
+    if to_m <= from_m:
+        return np.zeros(0), np.zeros(0)
+    step = 0.5 * resolution_m
+    distance = np.arange(from_m, to_m, step)
+    n_bearing = int(np.ceil(2.0 * half_width_rad * to_m / step)) + 1
+    angle = head.yaw_rad + np.linspace(-half_width_rad, half_width_rad, n_bearing)
+    x = head.x_m + distance[:, None] * np.cos(angle)
+    y = head.y_m + distance[:, None] * np.sin(angle)
+    return x.ravel(), y.ravel()
+
+
+def _count(length_m: FloatArray, resolution_m: float) -> IntArray:
+    """Points on a stretch so that they lie no more than half a cell apart, at least 3."""
+    n = np.ceil(length_m / (0.5 * resolution_m)).astype(np.int64) + 1
+    return np.clip(n, 3, _MAX_ARC_SAMPLES)
+
+
+def _ragged(counts: IntArray) -> tuple[IntArray, IntArray]:
+    """Owner and running number within the owner for groups of the given sizes.
+
+    Examples
+    --------
+    >>> [a.tolist() for a in _ragged(np.array([2, 0, 3]))]
+    [[0, 0, 2, 2, 2], [0, 1, 0, 1, 2]]
+    """
+    owner = np.repeat(np.arange(counts.size), counts)
+    start = np.cumsum(counts) - counts
+    return owner, np.arange(owner.size) - start[owner]

@@ -1,0 +1,126 @@
+"""From the evidence of one ping to new log-odds, only in the cells that it touches.
+
+The binary Bayes filter in log-odds form: S. Thrun, W. Burgard and D. Fox, Probabilistic
+Robotics, MIT Press 2005, sections 4.2 and 9.2 (prior 0.5, so that its log-odds are 0).
+"""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+
+from ..types import FloatArray
+from .config import MappingConfig
+from .grid import IntArray, RollingGrid, fade
+
+_MATTERS = 0.02
+"""Mass from which an echo counts as speaking for a cell."""
+
+
+class GridUpdater:
+    """Applies evidence to a grid; keeps scratch arrays so that the cost is that of the cells."""
+
+    def __init__(self, grid: RollingGrid, config: MappingConfig) -> None:
+        self.grid, self.config = grid, config
+        n = grid.log_odds.size
+        self._firm, self._soft, self._free = np.zeros(n), np.zeros(n), np.zeros(n)
+        self._soft_cap = _log_odds(config.soft_max_probability)
+
+    def read(self, cells: IntArray, time_s: float) -> FloatArray:
+        """Faded log-odds of cells at a time; 0 for cell -1 (outside the window)."""
+        grid, config = self.grid, self.config
+        faded = fade(
+            grid.log_odds[cells],
+            time_s - grid.stamp_s[cells],
+            config.occupied_decay_s,
+            config.free_decay_s,
+        )
+        return np.where(cells >= 0, faded, 0.0)
+
+    def apply(
+        self,
+        hits: tuple[IntArray, FloatArray, FloatArray],
+        free: tuple[IntArray, FloatArray],
+        head_xy_m: tuple[float, float],
+        time_s: float,
+    ) -> bool:
+        """Add one ping's evidence.
+
+        Parameters
+        ----------
+        hits
+            Cells with the mass of firm and of soft evidence in them; cells may repeat.
+        free
+            Cells with the weight of being free; cells may repeat, weights add up to at most 1.
+
+        Returns
+        -------
+        Whether any cell of the window was touched.
+        """
+        hit_cells, firm, soft = _inside(*hits)
+        free_cells, weight = _inside(*free)
+        cells = np.concatenate([hit_cells, free_cells])
+        if cells.size == 0:
+            return False
+        np.add.at(self._firm, hit_cells, firm)
+        np.add.at(self._soft, hit_cells, soft)
+        np.add.at(self._free, free_cells, weight)
+        # Cells may repeat: all their copies read and write the same values.
+        masses = self._firm[cells], self._soft[cells], np.minimum(self._free[cells], 1.0)
+        for scratch in (self._firm, self._soft, self._free):
+            scratch[cells] = 0.0
+        self._write(cells, *masses, head_xy_m, time_s)
+        return True
+
+    def _write(
+        self,
+        cells: IntArray,
+        firm: FloatArray,
+        soft: FloatArray,
+        free: FloatArray,
+        head_xy_m: tuple[float, float],
+        time_s: float,
+    ) -> None:
+        grid, config = self.grid, self.config
+        prior = self.read(cells, time_s)
+        matters = firm + soft >= _MATTERS
+        confirmed = self._confirm(cells, matters, head_xy_m)
+        lowered = prior - config.free_log_odds * np.where(matters, 0.0, free)
+        raised = lowered + np.log1p(config.hit_gain * soft)
+        capped = np.maximum(np.minimum(raised, self._soft_cap), lowered)
+        hit = np.where(confirmed, raised, capped) + np.log1p(config.hit_gain * firm)
+        new = np.minimum(hit, prior + config.max_hit_log_odds)
+        new = np.clip(new, config.min_log_odds, config.max_log_odds)
+        grid.log_odds[cells] = new
+        grid.stamp_s[cells] = time_s
+        gone = cells[new <= 0.0]
+        grid.view_x_m[gone] = np.nan
+        grid.view_y_m[gone] = np.nan
+        grid.confirmed[gone] = False
+
+    def _confirm(
+        self,
+        cells: IntArray,
+        matters: np.ndarray[tuple[int], np.dtype[np.bool_]],
+        head_xy_m: tuple[float, float],
+    ) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
+        """Remember who saw a cell first; confirm it once it is seen from elsewhere."""
+        grid = self.grid
+        distance = np.hypot(
+            grid.view_x_m[cells] - head_xy_m[0], grid.view_y_m[cells] - head_xy_m[1]
+        )
+        new = cells[matters & np.isnan(distance)]
+        grid.view_x_m[new], grid.view_y_m[new] = head_xy_m
+        again = matters & (distance >= self.config.confirm_distance_m)
+        grid.confirmed[cells[again]] = True
+        return np.asarray(grid.confirmed[cells])
+
+
+def _inside(cells: IntArray, *values: FloatArray) -> tuple[IntArray, ...]:
+    keep = cells >= 0
+    return cells[keep], *(value[keep] for value in values)  # type: ignore[return-value]
+
+
+def _log_odds(probability: float) -> float:
+    return math.log(probability / (1.0 - probability))
