@@ -116,7 +116,8 @@ def pulse_metrics(head: Head, ear: int, burst_cycles: float) -> PulseMetrics:
     bandwidths are those of the squared magnitude spectrum.
     """
     span_hz, n = min(60e3, head.carrier_hz), 16384
-    frequency = head.carrier_hz + np.fft.fftfreq(n, 1.0 / span_hz)
+    offset = np.fft.fftfreq(n, 1.0 / span_hz)
+    frequency = np.asarray(head.carrier_hz + offset, dtype=np.float64)
     spectrum = echo_spectrum(head, ear, frequency, burst_cycles)
     power = np.abs(spectrum) ** 2
     centre = float(np.sum(frequency * power) / np.sum(power))

@@ -106,7 +106,7 @@ def absorption_db_per_m(
 def _water_percent_iso(temperature_c: float, humidity: float, p_rel: float) -> float:
     kelvin = temperature_c + _ZERO_CELSIUS_K
     exponent = -6.8346 * (273.16 / kelvin) ** 1.261 + 4.6151
-    return 100.0 * humidity * 10.0**exponent / p_rel
+    return float(100.0 * humidity * 10.0**exponent / p_rel)
 
 
 def _check_air(temperature_c: float, relative_humidity: float) -> None:

@@ -36,8 +36,11 @@ class EchoSource(Protocol):
     """
 
     @property
-    def info(self) -> SourceInfo: ...
+    def info(self) -> SourceInfo:
+        """What the source is; constant."""
 
-    def events(self) -> Iterator[Event]: ...
+    def events(self) -> Iterator[Event]:
+        """Raw echoes and odometry in the order of time, from the beginning."""
 
-    def close(self) -> None: ...
+    def close(self) -> None:
+        """Let go of devices and files; harmless when called twice."""

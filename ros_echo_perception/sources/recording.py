@@ -66,7 +66,7 @@ class Recording:
     @property
     def duration_s(self) -> float:
         """From the first ping or odometry to the end of the last ping."""
-        ends = [self.pings[-1].time_s + self.samples.shape[2] / self.sample_rate_hz]
+        ends = [self.pings[-1].time_s + int(self.samples.shape[2]) / self.sample_rate_hz]
         ends += [sample.time_s for sample in self.odometry[-1:]]
         return max(ends) - self.start_time_s
 

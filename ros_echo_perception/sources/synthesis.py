@@ -1,0 +1,157 @@
+"""From echo paths to the sound pressure at the converter: one ping, frequency by frequency."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from scipy import fft
+
+from ..core.acoustics import (
+    burst_spectrum,
+    echo_spectrum,
+    pulse_metrics,
+    resonance_response,
+)
+from ..core.air import absorption_db_per_m, speed_of_sound
+from ..core.head import Head, Transducer
+from ..core.types import ComplexArray, FloatArray
+from .echo_paths import EchoPaths
+from .simulator_config import SimulatorConfig
+
+REFERENCE_BURST_CYCLES = 3.0
+_BAND = 0.3
+"""Half width of the computed band over the carrier; resonators are 40 dB down outside."""
+_TAIL_S = 0.004
+"""Longest ringing: kept free behind the record so that nothing wraps round to its start."""
+_CASING_RESONANCE, _CASING_Q = 0.985, 35.0
+"""The direct pulse also runs through the casing, which rings longer than the transducers."""
+_ABSORPTION_NEPER = math.log(10.0) / 20.0
+
+
+class Synthesis:
+    """Turns echo paths of one unit into voltages, as fractions of full scale.
+
+    Spectra that do not depend on the ping are computed once.
+    """
+
+    def __init__(self, unit: Head, config: SimulatorConfig) -> None:
+        self.unit, self.config = unit, config
+        rate_hz = unit.sample_rate_hz
+        self.n_samples = round(config.record_s * rate_hz)
+        self.emission_sample = round(config.lead_s * rate_hz)
+        self._n_fft = int(fft.next_fast_len(self.n_samples + round(_TAIL_S * rate_hz), real=True))
+        bin_hz = rate_hz / self._n_fft
+        half_hz = min(_BAND * unit.carrier_hz, 0.98 * (rate_hz / 2.0 - unit.carrier_hz))
+        low, high = unit.carrier_hz - half_hz, unit.carrier_hz + half_hz
+        self._bins = np.arange(math.ceil(low / bin_hz), math.floor(high / bin_hz) + 1)
+        self._frequency = np.asarray(self._bins * bin_hz, dtype=np.float64)
+        air = config.temperature_c, config.relative_humidity
+        self.speed_of_sound_m_s = speed_of_sound(*air)
+        self._absorption = _ABSORPTION_NEPER * absorption_db_per_m(self._frequency, *air)
+        self.carrier_absorption = float(
+            _ABSORPTION_NEPER * absorption_db_per_m(unit.carrier_hz, *air)
+        )
+        self._receiver = self._receivers()
+        self.level = 2.0 * config.source_level / self._peak(REFERENCE_BURST_CYCLES)
+        self._sender = self._emitted(np.ones(1))[0]
+        self.crosstalk = self._crosstalk()
+
+    @property
+    def pulse_peak(self) -> FloatArray:
+        """Peak of the envelope of an echo of amplitude 1/m in each ear, shape (2,)."""
+        cycles, gains = self.config.burst_cycles, self._gains()
+        return np.array(
+            [self.level * abs(gains[ear]) * self._peak(cycles, ear) for ear in (0, 1)]
+        )
+
+    def echoes(self, paths: EchoPaths) -> FloatArray:
+        """Sum of all echoes, without direct pulse, noise and gain curve, (2, n_samples)."""
+        spectrum = np.zeros((2, self._n_fft // 2 + 1), complex)
+        for ear in (0, 1):
+            spectrum[ear, self._bins] = self._ear(paths, ear)
+        return self._samples(spectrum)
+
+    def _ear(self, paths: EchoPaths, ear: int) -> ComplexArray:
+        delay = paths.tof_s[ear] + self._start_s
+        decay = self._absorption * paths.length_m[ear][:, None]
+        ways = np.exp(-decay) * self._phases(delay)
+        if np.all(paths.doppler[ear] == 1.0):
+            total = (paths.amplitude[ear] @ ways) * self._sender
+        else:
+            total = np.einsum(
+                "n,nf,nf->f", paths.amplitude[ear], ways, self._emitted(paths.doppler[ear])
+            )
+        return np.asarray(total * self._receiver[ear])
+
+    @property
+    def _start_s(self) -> float:
+        """Time of the start of the drive in the record."""
+        return self.emission_sample / self.unit.sample_rate_hz + self.unit.latency_s
+
+    def _phases(self, delay_s: FloatArray) -> ComplexArray:
+        """exp(-2 pi j f delay), (n, bins), by two coarse tables: far fewer exponentials."""
+        fine = 32
+        bins, step = self._bins, -2j * math.pi * self.unit.sample_rate_hz / self._n_fft
+        coarse = np.exp(step * np.outer(delay_s, np.arange(bins[0], bins[-1] + 1, fine)))
+        table = coarse[:, :, None] * np.exp(step * np.outer(delay_s, np.arange(fine)))[:, None, :]
+        return np.asarray(table.reshape(len(delay_s), -1)[:, : len(bins)])
+
+    def _emitted(self, doppler: FloatArray) -> ComplexArray:
+        """Spectrum of the emitted burst as it arrives with a Doppler shift, (n, bins).
+
+        A burst s(t) received with the factor d is s(d t): its spectrum is S(f / d) / d.
+        """
+        head = self.unit
+        frequency: FloatArray = self._frequency / doppler[:, None]
+        burst = burst_spectrum(
+            frequency, head.carrier_hz, self.config.burst_cycles, head.drive_waveform
+        )
+        emitted = burst * resonance_response(head.transmitter, frequency) / doppler[:, None]
+        # A sine burst's analytic signal is -j times its baseband; half of it is in each bin.
+        return np.asarray(-0.5j * self.level * head.sample_rate_hz * emitted)
+
+    def _receivers(self) -> tuple[ComplexArray, ComplexArray]:
+        left, right = (
+            gain * resonance_response(receiver, self._frequency)
+            for gain, receiver in zip(self._gains(), self.unit.receivers, strict=True)
+        )
+        return left, right
+
+    def _gains(self) -> tuple[complex, complex]:
+        """Gain mismatch and phase mismatch, half of each in either ear."""
+        half = 10.0 ** (self.unit.gain_mismatch_db / 40.0)
+        turn = np.exp(0.5j * self.unit.phase_mismatch_rad)
+        return complex(half * turn), complex(1.0 / (half * turn))
+
+    def _peak(self, burst_cycles: float, ear: int | None = None) -> float:
+        """Peak of the pulse's envelope for a unit drive; the mean of both ears if not told."""
+        if ear is None:
+            return 0.5 * (self._peak(burst_cycles, 0) + self._peak(burst_cycles, 1))
+        delay_s = pulse_metrics(self.unit, ear, burst_cycles).peak_delay_s
+        offset = self._frequency - self.unit.carrier_hz
+        spectrum = echo_spectrum(self.unit, ear, self._frequency, burst_cycles)
+        bin_hz = float(self._frequency[1] - self._frequency[0])
+        return float(abs(np.sum(spectrum * np.exp(2j * math.pi * offset * delay_s))) * bin_hz)
+
+    def _crosstalk(self) -> FloatArray:
+        """The direct pulse through air and casing, (2, n_samples)."""
+        head = self.unit
+        casing = Transducer(
+            (0.0, 0.0, 0.0), 0.0, 1.0,
+            _CASING_RESONANCE * head.carrier_hz, head.carrier_hz / _CASING_Q,
+        )  # fmt: skip
+        spectrum = np.zeros((2, self._n_fft // 2 + 1), complex)
+        for ear, receiver in enumerate(head.receivers):
+            way_m = math.dist(receiver.position_m, head.transmitter.position_m)
+            delay = np.array([way_m / self.speed_of_sound_m_s + self._start_s])
+            spectrum[ear, self._bins] = (
+                self._phases(delay)[0] * self._sender * self._receiver[ear]
+                * resonance_response(casing, self._frequency)
+            )  # fmt: skip
+        pulse = self._samples(spectrum)
+        peak = np.max(np.abs(pulse), axis=1, keepdims=True)
+        return np.asarray(self.config.crosstalk_level * pulse / peak)
+
+    def _samples(self, spectrum: ComplexArray) -> FloatArray:
+        return np.asarray(fft.irfft(spectrum, self._n_fft, axis=1)[:, : self.n_samples])
