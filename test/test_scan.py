@@ -104,7 +104,7 @@ def test_silence_never_clears_by_default():
 
 
 def test_silence_may_clear_up_to_the_stated_range_within_the_beam():
-    config = ScanConfig(silence="clear", clear_range_m=2.5)
+    config = ScanConfig(silence_policy="clear_to_range", clear_range_m=2.5)
     scan = scan_from_result(ping(echo(1.0, 0.0, 0.0), echo(4.0, 0.3, 0.05)), config)
     assert scan.range_max_m == 2.5
     in_beam = np.abs(angles(scan)) <= 0.5
@@ -125,7 +125,7 @@ def test_silence_may_clear_up_to_the_stated_range_within_the_beam():
     ],
 )
 def test_a_ping_that_could_not_hear_does_not_clear(changes):
-    config = ScanConfig(silence="clear", clear_range_m=2.5)
+    config = ScanConfig(silence_policy="clear_to_range", clear_range_m=2.5)
     assert np.all(np.isnan(scan_from_result(ping(**changes), config).ranges_m))
 
 
@@ -137,7 +137,7 @@ def test_an_unlikely_echo_is_left_out():
 def test_no_finite_range_lies_outside_the_stated_limits():
     rng = np.random.default_rng(4)
     echoes = [echo(float(r), float(b)) for r, b in rng.uniform((0.0, -1.0), (14.0, 1.0), (60, 2))]
-    for config in (ScanConfig(), ScanConfig(silence="clear", clear_range_m=1.0)):
+    for config in (ScanConfig(), ScanConfig(silence_policy="clear_to_range", clear_range_m=1.0)):
         scan = scan_from_result(ping(*echoes), config)
         finite = scan.ranges_m[np.isfinite(scan.ranges_m)]
         assert finite.size
@@ -148,6 +148,6 @@ def test_limits_that_contradict_are_refused():
     with pytest.raises(SettingError, match="range_max_m is 1.0; allowed: more than range_min_m"):
         ScanConfig(range_min_m=1.0, range_max_m=1.0)
     with pytest.raises(SettingError, match="clear_range_m"):
-        ScanConfig(silence="clear", range_min_m=2.0, clear_range_m=2.0)
-    with pytest.raises(SettingError, match="one of unknown, clear"):
-        ScanConfig(silence="free")
+        ScanConfig(silence_policy="clear_to_range", range_min_m=2.0, clear_range_m=2.0)
+    with pytest.raises(SettingError, match="one of never_clear, clear_to_range"):
+        ScanConfig(silence_policy="free")

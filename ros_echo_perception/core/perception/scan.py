@@ -7,7 +7,7 @@ value     meaning
 ========  ========================================================================================
 a range   an echo whose bearing may lie in this beam; the nearest one where several do
 ``-inf``  something was heard nearer than the head can measure (or nearer than ``range_min_m``)
-``+inf``  only with ``silence`` = "clear": nothing was heard up to the published ``range_max``
+``+inf``  only with ``silence_policy`` = "clear_to_range": nothing was heard up to ``range_max``
 ``NaN``   no answer. Silence is no evidence of free space: a slanted smooth wall sends the pulse
           away. Also every beam outside the beam of the head, or when the ping was disturbed
 ========  ========================================================================================
@@ -19,7 +19,7 @@ cannot be excluded from any of these beams. A user who steers by openings sets `
 "omit" and reads such echoes from the detections.
 
 Nothing is said about what lies in front of an echo: consumers should mark from this scan, and clear
-by other sensors, unless they accept the risk that "clear" states.
+by other sensors, unless they accept the risk that "clear_to_range" states.
 
 References
 ----------
@@ -60,17 +60,17 @@ class ScanConfig(Settings):
     range_min_m: float = setting(0.05, "Echoes nearer than this are told as -inf", "m", 0.0, 2.0)
     range_max_m: float = setting(
         10.0,
-        "Limit of the scan with silence = unknown; choose it larger than the local costmap",
+        "Limit of the scan with never_clear; choose it larger than the radius of the costmap",
         "m", 0.5, 50.0,
     )  # fmt: skip
-    silence: str = setting(
-        "unknown",
-        "What a silent beam says: unknown = NaN, never clears; clear = +inf up to clear_range_m",
-        choices=("unknown", "clear"),
+    silence_policy: str = setting(
+        "never_clear",
+        "What a silent beam says: NaN (never_clear), or +inf up to clear_range_m (clear_to_range)",
+        choices=("never_clear", "clear_to_range"),
     )
     clear_range_m: float = setting(
         2.0,
-        "Limit of the scan with silence = clear: silent beams count as free up to here; "
+        "Limit of the scan with clear_to_range: silent beams count as free up to here; "
         "echoes beyond are left out",
         "m", 0.5, 50.0,
     )  # fmt: skip
@@ -92,7 +92,7 @@ class ScanConfig(Settings):
     def check_together(self) -> None:
         """The limit that is published must lie beyond the nearest range."""
         if self.range_limit_m <= self.range_min_m:
-            name = "clear_range_m" if self.silence == "clear" else "range_max_m"
+            name = "clear_range_m" if self.silence_policy == "clear_to_range" else "range_max_m"
             raise SettingError(
                 refuse(name, self.range_limit_m, f"more than range_min_m ({self.range_min_m:g} m)")
             )
@@ -100,7 +100,7 @@ class ScanConfig(Settings):
     @property
     def range_limit_m(self) -> float:
         """The range_max that the scan states; constant as long as the configuration is."""
-        return self.clear_range_m if self.silence == "clear" else self.range_max_m
+        return self.clear_range_m if self.silence_policy == "clear_to_range" else self.range_max_m
 
     @property
     def n_beams(self) -> int:
@@ -177,7 +177,8 @@ def _silent_beams(result: PingResult, config: ScanConfig, angle: FloatArray) -> 
     """What the beams say where there is no echo."""
     ranges = np.full(angle.size, math.nan)
     heard_far_enough = result.range_max_m >= config.range_limit_m
-    if config.silence == "clear" and heard_far_enough and not result.flags & _DISTURBED:
+    says_free = config.silence_policy == "clear_to_range" and heard_far_enough
+    if says_free and not result.flags & _DISTURBED:
         ranges[np.abs(angle) <= result.beam_half_width_rad] = math.inf
     return ranges
 
