@@ -26,12 +26,20 @@ class MappingConfig(Settings):
         0.5, "Echoes less likely than this are not used", "", 0.0, 1.0
     )
     hit_gain: float = setting(
-        8.0,
+        1.3,
         "Likelihood ratio gained by a cell that alone can explain an echo; cells that share it "
         "gain in proportion",
         "",
         0.1,
         100.0,
+    )
+    surface_width_m: float = setting(
+        0.05,
+        "What reflects is a piece of surface of about this size (1 sigma across the line of "
+        "sight), so that neighbouring echoes of a wall support each other",
+        "m",
+        0.0,
+        0.5,
     )
     max_hit_log_odds: float = setting(
         0.55,

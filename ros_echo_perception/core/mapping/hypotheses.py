@@ -112,7 +112,7 @@ def hypotheses_of(
         table[:, 2] + np.sqrt(bearing_variance),
         np.sqrt(table[:, 2] ** 2 + bearing_variance),
     )
-    doubtful = np.array([bool(d.flags & _DOUBTFUL) for d in detections])[owner]
+    doubtful = np.array([bool(d.flags & _DOUBTFUL) for d in detections], bool)[owner]
     return Hypotheses(
         detection=owner,
         head_x_m=poses[:, 0],

@@ -10,20 +10,22 @@ from collections.abc import Iterable, Mapping
 import numpy as np
 
 from ..errors import OdometryGapError, SettingError, refuse
-from ..types import Detection, FloatArray, OdometrySample, PingFlag, PingResult, Pose2
-from . import sensor_model
+from ..types import Detection, OdometrySample, PingResult, Pose2
 from .config import CLEAR_TO_RANGE, MappingConfig
-from .grid import IntArray, MapSnapshot, RollingGrid
+from .evidence import (
+    arcs_of,
+    free_evidence,
+    free_paths,
+    head_poses,
+    hit_evidence,
+    with_silence,
+)
+from .grid import MapSnapshot, RollingGrid
 from .hypotheses import hypotheses_of, is_valid
 from .pending import PendingPings, WaitingPing
 from .poses import PoseBuffer, PoseOutcome
+from .sensor_model import clear_view, share_by_odds
 from .update import GridUpdater
-
-_DEAF = (
-    PingFlag.LEFT_CLIPPED | PingFlag.RIGHT_CLIPPED | PingFlag.LEFT_DEAD | PingFlag.RIGHT_DEAD
-    | PingFlag.OFFSET_DRIFT | PingFlag.INTERFERENCE
-)  # fmt: skip
-_SILENT_MARGIN_M = 0.15
 
 
 class MapOutcome(enum.Enum):
@@ -165,20 +167,26 @@ class LocalMapper:
 
     # ------------------------------------------------------------------ the algorithm
     def _fuse(self, ping: WaitingPing) -> MapOutcome:
-        result, time_s = ping.result, ping.emission_time_s
+        config, result, time_s = self.config, ping.result, ping.emission_time_s
         detections = self._usable(result)
         try:
-            emission, heads = self._head_poses(ping, detections)
+            robot = self._poses.pose_at(time_s)
+            emission, heads = head_poses(self._poses, self.mounts[ping.head_id], result, detections)
         except OdometryGapError:
             return MapOutcome.SKIPPED_NO_ODOMETRY
-        moved = self.grid.centre_on(*self._robot_position(time_s))
-        growth = self._poses.variance_growth(time_s, self.config.covariance_span_s)
-        hits, free = self._evidence(detections, heads, growth, result, time_s)
-        free = self._with_silence(free, emission, result, detections)
+        moved = self.grid.centre_on(robot.x_m, robot.y_m)
+        growth = self._poses.variance_growth(time_s, config.covariance_span_s)
+        possible = hypotheses_of(detections, heads, growth, config)
+        paths, path_cells = free_paths(possible, self.grid, result.range_min_m, config)
+        clear = clear_view(possible, paths, self._updater.read(path_cells, time_s))
+        arcs, arc_cells = arcs_of(possible, self.grid, config)
+        mass = share_by_odds(arcs, possible, self._updater.read(arc_cells, time_s))
+        hits = hit_evidence(possible, arcs, arc_cells, mass, clear)
+        free = free_evidence(paths, path_cells, clear)
+        if config.silence_policy == CLEAR_TO_RANGE:
+            free = with_silence(free, self.grid, emission, result, detections, config)
         touched = self._updater.apply(hits, free, (emission.x_m, emission.y_m), time_s)
-        self._map_time_s = max(
-            time_s, -math.inf if math.isnan(self._map_time_s) else self._map_time_s
-        )
+        self._map_time_s = float(np.fmax(time_s, self._map_time_s))
         self._revision += int(moved or touched)
         self.counts["detections_used"] += len(detections)
         return MapOutcome.FUSED
@@ -192,76 +200,6 @@ class LocalMapper:
             if d.range_m <= self.config.max_range_m
             and d.existence_probability >= self.config.min_existence_probability
         ]
-
-    def _robot_position(self, time_s: float) -> tuple[float, float]:
-        pose = self._poses.pose_at(time_s)
-        return pose.x_m, pose.y_m
-
-    def _head_poses(
-        self, ping: WaitingPing, detections: list[Detection]
-    ) -> tuple[Pose2, FloatArray]:
-        """The head at emission, and for each echo (n, 3) where it counts from.
-
-        The measured range is half the way out and back, so it counts, to first order in the
-        motion, from the middle between the head's places at emission and at reception. The
-        bearing is that of the wave as it comes in: it counts from the heading at reception.
-        """
-        mount, result = self.mounts[ping.head_id], ping.result
-        flight_s = np.array([0.0] + [2.0 * d.range_m for d in detections])
-        flight_s /= result.speed_of_sound_m_s
-        base = self._poses.poses_at(ping.emission_time_s + flight_s)
-        c, s = np.cos(base[:, 2]), np.sin(base[:, 2])
-        x = base[:, 0] + c * mount.x_m - s * mount.y_m
-        y = base[:, 1] + s * mount.x_m + c * mount.y_m
-        yaw = base[:, 2] + mount.yaw_rad
-        heads = np.stack([0.5 * (x[0] + x[1:]), 0.5 * (y[0] + y[1:]), yaw[1:]], axis=1)
-        return Pose2(float(x[0]), float(y[0]), float(yaw[0])), heads
-
-    def _evidence(
-        self,
-        detections: list[Detection],
-        heads: FloatArray,
-        growth: tuple[float, float, float],
-        result: PingResult,
-        time_s: float,
-    ) -> tuple[tuple[IntArray, FloatArray, FloatArray], tuple[IntArray, FloatArray]]:
-        """Masses of occupied evidence (firm, soft) and weights of free evidence, by cell."""
-        config, grid = self.config, self.grid
-        possible = hypotheses_of(detections, heads, growth, config)
-        arcs = sensor_model.arc_samples(possible, config.resolution_m)
-        paths = sensor_model.path_samples(
-            possible, config.resolution_m, result.range_min_m, config.free_half_width_m
-        )
-        arc_cells = grid.locate(arcs.x_m, arcs.y_m)
-        path_cells = grid.locate(paths.samples.x_m, paths.samples.y_m)
-        in_the_way = self._updater.read(path_cells, time_s)
-        clear = sensor_model.clear_view(possible, paths, in_the_way)
-        shared = sensor_model.share_by_odds(arcs, possible, self._updater.read(arc_cells, time_s))
-        mass = shared * clear[arcs.owner]
-        soft = possible.soft[arcs.owner]
-        free = paths.samples.weight * clear[paths.samples.owner]
-        return (arc_cells, np.where(soft, 0.0, mass), np.where(soft, mass, 0.0)), (path_cells, free)
-
-    def _with_silence(
-        self,
-        free: tuple[IntArray, FloatArray],
-        emission: Pose2,
-        result: PingResult,
-        detections: list[Detection],
-    ) -> tuple[IntArray, FloatArray]:
-        """Add what silence says, where the policy lets it say anything."""
-        if self.config.silence_policy != CLEAR_TO_RANGE or result.flags & _DEAF:
-            return free
-        nearest_m = min((d.range_m for d in detections), default=math.inf) - _SILENT_MARGIN_M
-        x, y = sensor_model.silent_samples(
-            emission,
-            result.beam_half_width_rad,
-            result.range_min_m,
-            min(self.config.clear_range_m, result.range_max_m, nearest_m),
-            self.config.resolution_m,
-        )
-        cells = self.grid.locate(x, y)
-        return np.concatenate([free[0], cells]), np.concatenate([free[1], np.ones(cells.size)])
 
 
 def _is_valid_ping(result: PingResult) -> bool:

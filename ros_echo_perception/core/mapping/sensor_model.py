@@ -61,12 +61,15 @@ class Paths:
     middle: NDArray[np.bool_]
 
 
-def arc_samples(hypotheses: Hypotheses, resolution_m: float) -> Samples:
+def arc_samples(
+    hypotheses: Hypotheses, resolution_m: float, surface_width_m: float = 0.0
+) -> Samples:
     """Points every half cell over each hypothesis, weights adding up to its weight."""
     h = hypotheses
     range_sigma = np.hypot(h.range_sigma_m, _MIN_RANGE_SIGMA_CELLS * resolution_m)
     range_span = _SPAN_SIGMAS * range_sigma
-    bearing_span = np.where(h.uniform, h.spread_rad, _SPAN_SIGMAS * h.spread_rad)
+    spread = np.hypot(h.spread_rad, surface_width_m / h.range_m)
+    bearing_span = np.where(h.uniform, h.spread_rad, _SPAN_SIGMAS * spread)
     n_range = _count(2.0 * range_span, resolution_m)
     n_bearing = _count(2.0 * bearing_span * h.range_m, resolution_m)
     owner, k = _ragged(n_range * n_bearing)
@@ -107,14 +110,15 @@ def path_samples(
     angle = (h.head_yaw_rad + h.bearing_rad)[owner]
     c, s = np.cos(angle), np.sin(angle)
     lateral_sigma = np.maximum(distance * h.spread_rad[owner], 1e-9)
-    crossing = erf(np.maximum(half_width_m, 0.5 * resolution_m) / lateral_sigma / np.sqrt(2.0))
+    half_m = max(half_width_m, 0.5 * resolution_m)
+    crossing = np.asarray(erf(half_m / lateral_sigma / np.sqrt(2.0)), float)
     samples = Samples(
         owner,
         h.head_x_m[owner] + distance * c - offset * s,
         h.head_y_m[owner] + distance * s + offset * c,
         crossing * h.weight[owner],
     )
-    return Paths(samples, distance, across == 0)
+    return Paths(samples, np.asarray(distance, float), across == 0)
 
 
 def clear_view(

@@ -7,12 +7,42 @@ Robotics, MIT Press 2005, sections 4.2 and 9.2 (prior 0.5, so that its log-odds 
 from __future__ import annotations
 
 import math
+from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from ..types import FloatArray
 from .config import MappingConfig
 from .grid import IntArray, RollingGrid, fade
+
+
+@dataclass(frozen=True)
+class HitEvidence:
+    """Mass of reflectors by cell, from firm and from soft hypotheses; cells may repeat."""
+
+    cells: IntArray
+    firm: FloatArray
+    soft: FloatArray
+
+    def inside(self) -> HitEvidence:
+        """Only what lies inside the window."""
+        keep = self.cells >= 0
+        return HitEvidence(self.cells[keep], self.firm[keep], self.soft[keep])
+
+
+@dataclass(frozen=True)
+class FreeEvidence:
+    """Weight of being free by cell; cells may repeat, more than 1 in all counts as 1."""
+
+    cells: IntArray
+    weight: FloatArray
+
+    def inside(self) -> FreeEvidence:
+        """Only what lies inside the window."""
+        keep = self.cells >= 0
+        return FreeEvidence(self.cells[keep], self.weight[keep])
+
 
 _MATTERS = 0.02
 """Mass from which an echo counts as speaking for a cell."""
@@ -39,33 +69,21 @@ class GridUpdater:
         return np.where(cells >= 0, faded, 0.0)
 
     def apply(
-        self,
-        hits: tuple[IntArray, FloatArray, FloatArray],
-        free: tuple[IntArray, FloatArray],
-        head_xy_m: tuple[float, float],
-        time_s: float,
+        self, hits: HitEvidence, free: FreeEvidence, head_xy_m: tuple[float, float], time_s: float
     ) -> bool:
         """Add one ping's evidence.
-
-        Parameters
-        ----------
-        hits
-            Cells with the mass of firm and of soft evidence in them; cells may repeat.
-        free
-            Cells with the weight of being free; cells may repeat, weights add up to at most 1.
 
         Returns
         -------
         Whether any cell of the window was touched.
         """
-        hit_cells, firm, soft = _inside(*hits)
-        free_cells, weight = _inside(*free)
-        cells = np.concatenate([hit_cells, free_cells])
+        hits, free = hits.inside(), free.inside()
+        cells = np.concatenate([hits.cells, free.cells])
         if cells.size == 0:
             return False
-        np.add.at(self._firm, hit_cells, firm)
-        np.add.at(self._soft, hit_cells, soft)
-        np.add.at(self._free, free_cells, weight)
+        np.add.at(self._firm, hits.cells, hits.firm)
+        np.add.at(self._soft, hits.cells, hits.soft)
+        np.add.at(self._free, free.cells, free.weight)
         # Cells may repeat: all their copies read and write the same values.
         masses = self._firm[cells], self._soft[cells], np.minimum(self._free[cells], 1.0)
         for scratch in (self._firm, self._soft, self._free):
@@ -102,9 +120,9 @@ class GridUpdater:
     def _confirm(
         self,
         cells: IntArray,
-        matters: np.ndarray[tuple[int], np.dtype[np.bool_]],
+        matters: NDArray[np.bool_],
         head_xy_m: tuple[float, float],
-    ) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
+    ) -> NDArray[np.bool_]:
         """Remember who saw a cell first; confirm it once it is seen from elsewhere."""
         grid = self.grid
         distance = np.hypot(
@@ -115,11 +133,6 @@ class GridUpdater:
         again = matters & (distance >= self.config.confirm_distance_m)
         grid.confirmed[cells[again]] = True
         return np.asarray(grid.confirmed[cells])
-
-
-def _inside(cells: IntArray, *values: FloatArray) -> tuple[IntArray, ...]:
-    keep = cells >= 0
-    return cells[keep], *(value[keep] for value in values)  # type: ignore[return-value]
 
 
 def _log_odds(probability: float) -> float:
