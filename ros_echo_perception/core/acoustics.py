@@ -60,8 +60,10 @@ def burst_spectrum(
 ) -> ComplexArray:
     """Spectrum of the drive near the carrier, as complex baseband of a unit-amplitude burst.
 
-    The burst is a sine from its zero crossing at time 0. A square drive differs only by its
-    harmonics, far outside the transducers' band, and by the factor 4/pi of its fundamental.
+    The burst is a sine (or a square wave) of whole half periods from its zero crossing at time 0.
+    With x = f / f0 - 1 and N cycles the exact transforms, apart from the common factor of the
+    gate, are 1 / (1 + x/2) for the sine and (4/pi) (pi x/2) cot(pi x/2) / (1 + x) for the square
+    wave: the skirts of its harmonics reach into the band and shift the centre by some 20 Hz.
 
     Returns
     -------
@@ -70,10 +72,12 @@ def burst_spectrum(
     duration_s = burst_cycles / carrier_hz
     frequency = np.asarray(frequency_hz, float)
     offset_hz = frequency - carrier_hz
-    # The real sine's mirror image at -carrier tilts the spectrum a little: f0 / mean(f, f0).
-    height = 2.0 * carrier_hz / (frequency + carrier_hz)
+    x = frequency / carrier_hz - 1.0
     if waveform == "square":
-        height = height * 4.0 / math.pi
+        # x cot(x) = cos(x) / sinc(x), which has no hole at 0
+        height = 4.0 / math.pi * np.cos(0.5 * math.pi * x) / np.sinc(0.5 * x) / (1.0 + x)
+    else:
+        height = 1.0 / (1.0 + 0.5 * x)
     return np.asarray(
         height
         * duration_s
@@ -129,15 +133,34 @@ def pulse_metrics(head: Head, ear: int, burst_cycles: float) -> PulseMetrics:
     time = np.arange(envelope.size) / (4 * span_hz)
     keep = time < time[-1] / 2
     envelope, time = envelope[keep], time[keep]
-    peak = int(np.argmax(envelope))
-    high = np.nonzero(envelope >= envelope[peak] / 2)[0]
+    step_s = float(time[1])
+    peak_position, peak = _summit(envelope)
     weight = envelope**2 / np.sum(envelope**2)
     mean = float(np.sum(weight * time))
     return PulseMetrics(
-        peak_delay_s=float(time[peak]),
-        envelope_sigma_s=float(time[high[-1]] - time[high[0]]) / math.sqrt(8 * math.log(2)),
+        peak_delay_s=peak_position * step_s,
+        envelope_sigma_s=_width(envelope, peak / 2.0) * step_s / math.sqrt(8 * math.log(2)),
         energy_sigma_s=math.sqrt(2.0 * float(np.sum(weight * (time - mean) ** 2))),
         centre_frequency_hz=centre,
         rms_bandwidth_hz=rms,
         noise_bandwidth_hz=noise,
     )
+
+
+def _summit(curve: FloatArray) -> tuple[float, float]:
+    """Position (in samples) and height of the maximum, by a parabola through three samples."""
+    top = int(np.argmax(curve))
+    if not 0 < top < len(curve) - 1:
+        return float(top), float(curve[top])
+    before, at, after = (float(v) for v in curve[top - 1 : top + 2])
+    shift = 0.5 * (before - after) / min(before - 2.0 * at + after, -1e-300)
+    return top + shift, at - 0.25 * (before - after) * shift
+
+
+def _width(curve: FloatArray, level: float) -> float:
+    """Samples between the outermost crossings of a level, linear between samples."""
+    high = np.flatnonzero(curve >= level)
+    first, last = int(high[0]), int(high[-1])
+    rise = first - 1 + (level - curve[first - 1]) / (curve[first] - curve[first - 1])
+    fall = last + (curve[last] - level) / (curve[last] - curve[last + 1])
+    return float(fall - rise)
