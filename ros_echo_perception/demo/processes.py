@@ -32,6 +32,10 @@ class NodeProcess:
     process: subprocess.Popen[bytes]
     log: Path
 
+    def stop(self) -> None:
+        """Interrupt it, as Ctrl-C would, and wait; harsher ways if it does not end."""
+        stop_all([self])
+
     def tail(self) -> str:
         """The last lines of its log."""
         lines = self.log.read_text(errors="replace").splitlines()[-_TAIL_LINES:]
@@ -45,13 +49,13 @@ class NodeGroup:
     """
 
     def __init__(self, log_folder: Path, environment: Mapping[str, str] | None = None) -> None:
-        self._log_folder = log_folder
+        self.log_folder = log_folder
         self._environment = dict(environment) if environment is not None else None
         self.nodes: list[NodeProcess] = []
 
     def start(self, name: str, module: str, arguments: Sequence[str]) -> NodeProcess:
         """Start ``python -m module arguments…``; its output goes to ``<name>.log``."""
-        log = self._log_folder / f"{name}.log"
+        log = self.log_folder / f"{name}.log"
         with log.open("wb") as file:
             process = subprocess.Popen(
                 [sys.executable, "-u", "-m", module, *arguments],
@@ -82,17 +86,13 @@ class NodeGroup:
                     f"log {node.log}:\n{node.tail()}"
                 )
 
+    def forget(self, node: NodeProcess) -> None:
+        """No longer watch a node that was stopped on purpose."""
+        self.nodes.remove(node)
+
     def stop(self) -> None:
-        """Interrupt, then terminate, then kill what is left."""
-        for sign, grace_s in (
-            (signal.SIGINT, _INTERRUPT_GRACE_S),
-            (signal.SIGTERM, _TERMINATE_GRACE_S),
-            (signal.SIGKILL, _TERMINATE_GRACE_S),
-        ):
-            running = [node for node in reversed(self.nodes) if node.process.poll() is None]
-            for node in running:
-                _signal_group(node.process, sign)
-            _wait(running, grace_s)
+        """Stop all nodes, the last started first."""
+        stop_all(list(reversed(self.nodes)))
         self.nodes.clear()
 
     def __enter__(self) -> NodeGroup:
@@ -100,6 +100,19 @@ class NodeGroup:
 
     def __exit__(self, *_: object) -> None:
         self.stop()
+
+
+def stop_all(nodes: Sequence[NodeProcess]) -> None:
+    """Interrupt, then terminate, then kill what is left."""
+    for sign, grace_s in (
+        (signal.SIGINT, _INTERRUPT_GRACE_S),
+        (signal.SIGTERM, _TERMINATE_GRACE_S),
+        (signal.SIGKILL, _TERMINATE_GRACE_S),
+    ):
+        running = [node for node in nodes if node.process.poll() is None]
+        for node in running:
+            _signal_group(node.process, sign)
+        _wait(running, grace_s)
 
 
 def _end_with_parent() -> None:

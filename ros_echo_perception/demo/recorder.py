@@ -5,13 +5,14 @@ from __future__ import annotations
 import importlib
 import threading
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from typing import Any
 
 import numpy as np
 from rclpy.node import Node
 from rclpy.qos import DurabilityPolicy, QoSProfile, ReliabilityPolicy
 from rclpy.serialization import deserialize_message
+from rosbags.interfaces import Qos
 
 from ..core.types import Pose2
 from ..offline.bag_reader import DETECTIONS, ODOMETRY, RAW_ECHO, odometry_from_message, stamp_s
@@ -45,9 +46,9 @@ class Recorder(Node):
         self.create_timer(_DISCOVERY_PERIOD_S, self._discover)
         self._discover()
 
-    def expect(self, topic: str, type_name: str, reliable: bool = True) -> None:
-        """Subscribe before the topic exists, so that not even its first message is missed."""
-        self._subscribe(topic, type_name, reliable, keep_last_sample=False)
+    def expect(self, topic: str, type_name: str, depth: int) -> None:
+        """Subscribe to a reliable topic before it exists: not even its first message is missed."""
+        self._subscribe(topic, type_name, quality(True, False, depth))
 
     def _discover(self) -> None:
         for topic, types in self.get_topic_names_and_types():
@@ -55,21 +56,21 @@ class Recorder(Node):
                 continue
             profiles = [i.qos_profile for i in self.get_publishers_info_by_topic(topic)]
             if profiles:
-                reliable = all(p.reliability == ReliabilityPolicy.RELIABLE for p in profiles)
-                kept = all(p.durability == DurabilityPolicy.TRANSIENT_LOCAL for p in profiles)
-                self._subscribe(topic, types[0], reliable, kept)
+                self._subscribe(topic, types[0], _offered(profiles))
 
-    def _subscribe(
-        self, topic: str, type_name: str, reliable: bool, keep_last_sample: bool
-    ) -> None:
+    def _subscribe(self, topic: str, type_name: str, qos: Qos) -> None:
         self._subscribed.add(topic)
-        self._bag.add_topic(topic, type_name, quality(reliable, keep_last_sample))
-        policy = ReliabilityPolicy.RELIABLE if reliable else ReliabilityPolicy.BEST_EFFORT
-        durability = (
-            DurabilityPolicy.TRANSIENT_LOCAL if keep_last_sample else DurabilityPolicy.VOLATILE
+        try:
+            message_type = _message_class(type_name)
+        except ImportError:
+            self.get_logger().warning(f"{topic} is not recorded: {type_name} is not installed")
+            return
+        self._bag.add_topic(topic, type_name, qos)
+        profile = QoSProfile(
+            depth=_QUEUE_DEPTH,
+            reliability=ReliabilityPolicy[qos.reliability.name],
+            durability=DurabilityPolicy[qos.durability.name],
         )
-        profile = QoSProfile(depth=_QUEUE_DEPTH, reliability=policy, durability=durability)
-        message_type = _message_class(type_name)
         handler = self._handlers.get(type_name)
 
         def receive(data: bytes) -> None:
@@ -114,6 +115,15 @@ class Recorder(Node):
         self._monitor.on_odometry(
             sample.time_s, Pose2(sample.pose.x_m, sample.pose.y_m, sample.pose.yaw_rad)
         )
+
+
+def _offered(profiles: Sequence[QoSProfile]) -> Qos:
+    """What all publishers of a topic offer: a subscriber that asks for no more gets it all."""
+    return quality(
+        all(p.reliability == ReliabilityPolicy.RELIABLE for p in profiles),
+        all(p.durability == DurabilityPolicy.TRANSIENT_LOCAL for p in profiles),
+        max(1, max(p.depth for p in profiles)),
+    )
 
 
 def _message_class(type_name: str) -> Any:

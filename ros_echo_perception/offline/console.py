@@ -16,10 +16,16 @@ from rich.progress import (
 )
 from rich.table import Table
 
+_WIDTH_OF_FILES = 140
+"""Wide enough that no table has to fold where there is no terminal."""
+
 
 def output() -> Console:
     """The console of results; made anew so that it follows a redirected standard output."""
-    return Console(highlight=False, soft_wrap=False)
+    console = Console(highlight=False)
+    if not console.is_terminal:
+        console.width = _WIDTH_OF_FILES
+    return console
 
 
 def progress_bar() -> Progress:

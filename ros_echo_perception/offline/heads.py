@@ -30,16 +30,18 @@ def load_heads(paths: Iterable[str | Path]) -> dict[str, Head]:
 
 
 def head_for(heads: Mapping[str, Head], name: str, file: str) -> Head:
-    """The head that made a recording.
+    """The head that made a recording; the only one given, for an input that names none.
 
     Raises
     ------
     FileFormatError
         When none of the heads has that name.
     """
+    if not name and len(heads) == 1:
+        return next(iter(heads.values()))
     if name not in heads:
         raise FileFormatError(
-            refuse("head", name, ", ".join(sorted(heads)) or "none given",
-                   "give its head file with --head", file)
+            refuse("head", name or "not named (a bag)", ", ".join(sorted(heads)) or "none given",
+                   "give the head file of that name, once, with --head", file)
         )  # fmt: skip
     return heads[name]

@@ -10,9 +10,17 @@ from typing import Any, TypeVar
 import yaml
 
 from ..core.errors import FileFormatError, refuse
+from ..core.fields import read_yaml
 from ..core.settings import Settings, describe, from_mapping
+from ..nodes.settings import MappingNodeSettings, ProcessingNodeSettings
 
 SettingsT = TypeVar("SettingsT", bound=Settings)
+_NODES: dict[str, type[Settings]] = {
+    "processing": ProcessingNodeSettings,
+    "mapping": MappingNodeSettings,
+}
+_NOT_OURS = {"scan", "use_sim_time", "qos_overrides"}
+"""Parameters of the nodes that are neither settings of a stage nor of its node."""
 
 
 def load_settings(path: str | Path | None, section: str, cls: type[SettingsT]) -> SettingsT:
@@ -37,21 +45,21 @@ def load_settings(path: str | Path | None, section: str, cls: type[SettingsT]) -
     data = load_yaml(path)
     ros = _ros_parameters(data, section)
     if ros is not None:
-        known = {info.name for info in describe(cls)}
-        return from_mapping(cls, {k: v for k, v in ros.items() if k in known}, str(path))
+        return from_mapping(cls, _without_node_parameters(ros, section), str(path))
     if isinstance(data.get(section), Mapping):
         data = data[section]
     return from_mapping(cls, data, str(path))
 
 
+def _without_node_parameters(ros: Mapping[str, Any], section: str) -> dict[str, Any]:
+    """The stage's own settings; a misspelt name stays in and is refused later."""
+    others = {info.name for info in describe(_NODES[section])} | _NOT_OURS
+    return {name: value for name, value in ros.items() if name not in others}
+
+
 def load_yaml(path: str | Path) -> dict[str, Any]:
     """The mapping in a YAML file; an empty file is an empty mapping."""
-    try:
-        data = yaml.safe_load(Path(path).read_text())
-    except OSError as error:
-        raise FileFormatError(f"{path}: cannot be read ({error.strerror or error}).") from None
-    except (yaml.YAMLError, UnicodeDecodeError) as error:
-        raise FileFormatError(f"{path}: is not YAML ({error}).") from None
+    data = read_yaml(path)
     if data is None:
         return {}
     if not isinstance(data, Mapping):

@@ -1,0 +1,71 @@
+"""Reads the parameters of running nodes and writes them as a ROS 2 parameter file."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Sequence
+from pathlib import Path
+from typing import Any
+
+import yaml
+from rclpy.node import Node
+from rclpy.parameter import parameter_value_to_python
+from rclpy.parameter_client import AsyncParameterClient
+from rclpy.task import Future
+
+from ..core.errors import SourceError
+
+_TIMEOUT_S = 5.0
+
+
+def read_parameters(node: Node, names: Sequence[str]) -> dict[str, dict[str, Any]]:
+    """All parameters of each named node; ``node`` is spun by another thread.
+
+    Raises
+    ------
+    SourceError
+        When a node does not answer.
+    """
+    return {name: _read(node, name) for name in names}
+
+
+def _read(node: Node, name: str) -> dict[str, Any]:
+    client = AsyncParameterClient(node, name)
+    if not client.wait_for_services(_TIMEOUT_S):
+        raise SourceError(f"the parameter services of {name} are not there; see its log.")
+    listed = _result(client.list_parameters(), name).result.names
+    values = _result(client.get_parameters(listed), name).values
+    return {
+        key: _plain(parameter_value_to_python(value))
+        for key, value in zip(listed, values, strict=True)
+    }
+
+
+def _result(future: Future, name: str) -> Any:
+    """The answer, waited for without spinning: another thread spins."""
+    end = time.monotonic() + _TIMEOUT_S
+    while not future.done():
+        if time.monotonic() > end:
+            raise SourceError(f"{name} does not answer about its parameters; see its log.")
+        time.sleep(0.01)
+    return future.result()
+
+
+def _plain(value: Any) -> Any:
+    return list(value) if value is not None and hasattr(value, "typecode") else value
+
+
+def write_parameters(parameters: dict[str, dict[str, Any]], path: Path) -> None:
+    """Write a file that ``--ros-args --params-file`` takes; unset parameters are left out."""
+    data = {
+        name: {
+            "ros__parameters": {
+                key: value
+                for key, value in sorted(values.items())
+                if value is not None and value != [] and not key.startswith("qos_overrides.")
+            }
+        }
+        for name, values in parameters.items()
+    }
+    header = "# Parameters of the demo's nodes as they ran.\n"
+    path.write_text(header + yaml.safe_dump(data, sort_keys=False))

@@ -1,0 +1,213 @@
+"""One run of the demo: nodes started, recorded, watched, stopped, and compared with the truth."""
+
+from __future__ import annotations
+
+import threading
+import time
+from dataclasses import dataclass
+from pathlib import Path
+
+import rclpy
+from rclpy.executors import ExternalShutdownException, SingleThreadedExecutor
+from rich.console import Console
+
+from ..core.errors import SourceError
+from ..nodes import topics
+from ..nodes.settings import DriverSettings
+from ..offline.bag_writer import BagWriter
+from ..offline.resources import shipped
+from ..sources.simulator_config import SimulatorConfig
+from .live import LiveView
+from .monitor import Monitor
+from .parameters import read_parameters, write_parameters
+from .processes import NodeGroup, NodeProcess
+from .recorder import Recorder
+
+NODES = ("processing", "mapping", "driver")
+_START_TIMEOUT_S = 30.0
+_SILENCE_S = 3.0
+_POLL_S = 0.25
+_LAST_MAP_S = 1.2  # two publishing periods of the mapping node
+
+
+@dataclass(frozen=True)
+class Plan:
+    """What to run: all of it is told to the nodes as parameters."""
+
+    seconds: float
+    out: Path
+    head: str = DriverSettings().head_file
+    world: str = "config/worlds/demo_room.yaml"
+    rate_hz: float = DriverSettings().rate_hz
+    seed: int = DriverSettings().seed
+
+    def world_path(self) -> Path:
+        """The world file: as given, or as shipped."""
+        return Path(self.world) if Path(self.world).exists() else shipped(self.world)
+
+    def arguments(self, node: str) -> list[str]:
+        """Command line of a node."""
+        given: dict[str, object] = {"head_file": self.head} if node != "mapping" else {}
+        if node == "driver":
+            given |= {
+                "source": "simulator", "world_file": str(self.world_path()),
+                "rate_hz": self.rate_hz, "seed": self.seed, "wait_for_consumer_s": 10.0,
+            }  # fmt: skip
+        if node == "mapping":
+            mount = SimulatorConfig().mount
+            given = {
+                "mount_x_m": [mount.x_m], "mount_y_m": [mount.y_m],
+                "mount_yaw_rad": [mount.yaw_rad],
+            }  # fmt: skip
+        words = ["--ros-args"]
+        config = shipped("config") / f"{node}.yaml"
+        if config.exists():
+            words += ["--params-file", str(config)]
+        for name, value in given.items():
+            words += ["-p", f"{name}:={value}"]
+        return words
+
+
+@dataclass
+class Outcome:
+    """What a run gave."""
+
+    monitor: Monitor
+    first_ping_s: float
+    counts: dict[str, int]
+
+
+class _Spinner:
+    """Spins a recorder in a thread of its own until closed."""
+
+    def __init__(self, recorder: Recorder) -> None:
+        self._executor = SingleThreadedExecutor()
+        self._executor.add_node(recorder)
+        self._error: BaseException | None = None
+        self._thread = threading.Thread(target=self._spin, name="recorder", daemon=True)
+        self._thread.start()
+
+    def _spin(self) -> None:
+        try:
+            self._executor.spin()
+        except ExternalShutdownException:
+            pass
+        except BaseException as error:  # reported by the main thread
+            self._error = error
+
+    def check(self) -> None:
+        """Raise what ended the thread."""
+        if self._error is not None:
+            raise SourceError(f"recording failed: {self._error!r}") from self._error
+
+    def close(self) -> None:
+        """Stop spinning and wait for the thread."""
+        self._executor.shutdown(timeout_sec=2.0)
+        self._thread.join(timeout=5.0)
+
+
+def run(plan: Plan, console: Console, started_s: float) -> Outcome:
+    """Run the nodes for a while and record everything.
+
+    Parameters
+    ----------
+    plan
+        What to run.
+    console
+        For the running table.
+    started_s
+        ``time.monotonic()`` at the start of the command.
+
+    Raises
+    ------
+    NodeDiedError
+        When a node ends by itself.
+    SourceError
+        When the nodes do not come up or stop talking.
+    """
+    logs = plan.out / "log"
+    logs.mkdir(parents=True, exist_ok=True)
+    monitor = Monitor()
+    with NodeGroup(logs) as nodes, BagWriter(plan.out / "bag") as bag:
+        for name in NODES[:2]:
+            _start(nodes, name, plan)
+        rclpy.init()
+        recorder = Recorder(bag, monitor)
+        for topic in (topics.RAW_ECHO, topics.DETECTIONS, topics.ODOMETRY):
+            recorder.expect(f"/{topic.name}", topic.message, depth=topics.QOS[topic.qos].depth)
+        spinner = _Spinner(recorder)
+        try:
+            _wait_for_consumers(recorder, nodes, spinner)
+            driver = _start(nodes, "driver", plan)
+            first_s = _wait_for_first_ping(monitor, nodes, spinner) - started_s
+            write_parameters(read_parameters(recorder, NODES), plan.out / "parameters.yaml")
+            _watch(plan, console, recorder, monitor, nodes, spinner)
+            driver.stop()
+            nodes.forget(driver)
+            _linger(nodes, spinner)
+        finally:
+            spinner.close()
+            recorder.destroy_node()
+            rclpy.try_shutdown()
+    return Outcome(monitor, first_s, dict(bag.counts))
+
+
+def _start(nodes: NodeGroup, name: str, plan: Plan) -> NodeProcess:
+    return nodes.start(name, f"ros_echo_perception.nodes.{name}", plan.arguments(name))
+
+
+def _wait_for_consumers(recorder: Recorder, nodes: NodeGroup, spinner: _Spinner) -> None:
+    """Until processing listens to echoes, and mapping to detections and odometry."""
+    end = time.monotonic() + _START_TIMEOUT_S
+    wanted = [topics.RAW_ECHO.name, topics.DETECTIONS.name, topics.ODOMETRY.name]
+    while any(recorder.count_subscribers(f"/{name}") < 2 for name in wanted):  # we are one
+        nodes.check()
+        spinner.check()
+        if time.monotonic() > end:
+            raise SourceError(
+                f"processing and mapping did not come up in {_START_TIMEOUT_S:g} s; their logs "
+                f"are in {nodes.log_folder}."
+            )
+        time.sleep(0.05)
+
+
+def _wait_for_first_ping(monitor: Monitor, nodes: NodeGroup, spinner: _Spinner) -> float:
+    """Monotonic time at which the first raw echo was there."""
+    end = time.monotonic() + _START_TIMEOUT_S
+    while not monitor.raw_received_s:
+        nodes.check()
+        spinner.check()
+        if time.monotonic() > end:
+            raise SourceError(
+                f"no ping in {_START_TIMEOUT_S:g} s; the driver's log is in {nodes.log_folder}."
+            )
+        time.sleep(0.02)
+    return time.monotonic()
+
+
+def _watch(
+    plan: Plan, console: Console, recorder: Recorder, monitor: Monitor, nodes: NodeGroup,
+    spinner: _Spinner,
+) -> None:  # fmt: skip
+    """Show the running table until the time is up or the simulated drive has ended."""
+    begin = min(monitor.raw_received_s.values())
+    with LiveView(console, plan.seconds) as view:
+        while (elapsed := time.time() - begin) < plan.seconds:
+            nodes.check()
+            spinner.check()
+            with recorder.lock:
+                view.update(monitor, elapsed)
+                silent_s = time.time() - max(monitor.raw_received_s.values())
+            if silent_s > _SILENCE_S:
+                console.print(f"The drive has ended after {elapsed - silent_s:.1f} s.")
+                return
+            time.sleep(_POLL_S)
+
+
+def _linger(nodes: NodeGroup, spinner: _Spinner) -> None:
+    """The driver is gone: let the others finish what is under way."""
+    end = time.monotonic() + _LAST_MAP_S
+    while time.monotonic() < end:
+        nodes.check()
+        spinner.check()
+        time.sleep(0.05)
