@@ -231,8 +231,12 @@ def test_dev_keeps_the_exit_code_and_the_arguments():
     [
         (["nonsense"], {}, "unknown command 'nonsense'"),
         (["run"], {}, "which command?"),
-        (["setup"], {"ROS_RELEASE": "foxy"}, "ROS_RELEASE is 'foxy'; allowed: jazzy, kilted"),
-        (["setup"], {"PYTHON": "/bin/false"}, "needs Python 3.10 to 3.13"),
+        (
+            ["setup"],
+            {"ROS_RELEASE": "foxy", "DEV_KIND": "wheels"},
+            "ROS_RELEASE is 'foxy'; allowed: jazzy, kilted",
+        ),
+        (["setup"], {"PYTHON": "/bin/false", "DEV_KIND": "wheels"}, "needs Python 3.10 to 3.13"),
     ],
 )
 def test_dev_says_what_is_wrong(arguments, environment, complaint):
