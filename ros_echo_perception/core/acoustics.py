@@ -39,12 +39,14 @@ def piston_directivity(x: FloatArray | float) -> FloatArray:
 def directivity(transducer: Transducer, angle_rad: FloatArray | float) -> FloatArray:
     """Amplitude of a transducer towards a direction in the head's frame, 1 on its axis.
 
-    Behind the baffle (more than 90 degrees off axis) it is 0.
+    More than 90 degrees off axis there is no piston law; sound creeps round the rim, taken as the
+    level at 90 degrees falling smoothly to nothing straight behind (common practice).
     """
     off_axis = np.asarray(angle_rad, float) - transducer.yaw_rad
     scale = HALF_POWER_X / math.sin(min(transducer.half_power_beam_width_rad, math.pi) / 2.0)
-    front = np.cos(off_axis) > 0.0
-    return np.where(front, piston_directivity(scale * np.sin(off_axis)), 0.0)
+    cosine = np.cos(off_axis)
+    sine = np.where(cosine > 0.0, np.sin(off_axis), 1.0)
+    return np.asarray(piston_directivity(scale * sine) * (1.0 + np.minimum(cosine, 0.0)))
 
 
 def resonance_response(transducer: Transducer, frequency_hz: FloatArray) -> ComplexArray:

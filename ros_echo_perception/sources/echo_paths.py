@@ -142,7 +142,7 @@ def _ear(
     height = sender.position_m[2] - ear.position_m[2]
     tof = np.zeros(n)
     # The receiver's place depends on the time of flight and the other way round.
-    for _ in range(3 if motion.moving else 1):
+    for _ in range(2 if motion.moving else 1):
         rays = _rays(world, found, source, motion.position(ear.position_m, tof), wave_number)
         length = np.hypot(rays.length, height)
         tof = length / c

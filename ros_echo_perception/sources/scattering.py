@@ -96,11 +96,11 @@ def glancing_point(
 ) -> FloatArray:
     """Point of a circle where the shortest way from source to receiver touches it, (n, 2).
 
-    By Fermat's principle the normal there halves the angle between both ways; three rounds of
+    By Fermat's principle the normal there halves the angle between both ways; two rounds of
     fixed-point iteration leave less than a micrometre of path.
     """
     point = centre
-    for _ in range(3):
+    for _ in range(2):
         normal = _unit(source - point) + _unit(receiver - point)
         point = centre + radius_m[:, None] * _unit(normal)
     return point

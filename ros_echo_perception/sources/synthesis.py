@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy import fft
 
 from ..core.acoustics import (
@@ -22,6 +23,11 @@ from .simulator_config import SimulatorConfig
 REFERENCE_BURST_CYCLES = 3.0
 _BAND = 0.3
 """Half width of the computed band over the carrier; resonators are 40 dB down outside."""
+_FINE, _MARGIN = 4, 400
+"""Steps per bin of the table of emitted spectra, and how many of them it has to spare: enough
+for a Doppler shift of 4 %, which is 7 m/s."""
+_INAUDIBLE = 0.01
+"""Echoes below this fraction of the noise's standard deviation are left out: under -20 dB."""
 _TAIL_S = 0.004
 """Longest ringing: kept free behind the record so that nothing wraps round to its start."""
 _CASING_RESONANCE, _CASING_Q = 0.985, 35.0
@@ -54,34 +60,39 @@ class Synthesis:
         )
         self._receiver = self._receivers()
         self.level = 2.0 * config.source_level / self._peak(REFERENCE_BURST_CYCLES)
+        self.pulse_peak = np.array(
+            [self.level * abs(g) * self._peak(config.burst_cycles, ear)
+             for ear, g in enumerate(self._gains())]
+        )  # fmt: skip
+        """Peak of the envelope of an echo of amplitude 1/m in each ear, shape (2,)."""
+        self._emitted_table = self._emission()
         self._sender = self._emitted(np.ones(1))[0]
         self.crosstalk = self._crosstalk()
-
-    @property
-    def pulse_peak(self) -> FloatArray:
-        """Peak of the envelope of an echo of amplitude 1/m in each ear, shape (2,)."""
-        cycles, gains = self.config.burst_cycles, self._gains()
-        return np.array(
-            [self.level * abs(gains[ear]) * self._peak(cycles, ear) for ear in (0, 1)]
-        )
 
     def echoes(self, paths: EchoPaths) -> FloatArray:
         """Sum of all echoes, without direct pulse, noise and gain curve, (2, n_samples)."""
         spectrum = np.zeros((2, self._n_fft // 2 + 1), complex)
-        for ear in (0, 1):
-            spectrum[ear, self._bins] = self._ear(paths, ear)
+        audible_peak = _INAUDIBLE * self.config.noise_rms
+        for ear, peaks in enumerate(self.peaks(paths)):
+            audible = np.flatnonzero(peaks > audible_peak)
+            spectrum[ear, self._bins] = self._ear(paths, ear, audible)
         return self._samples(spectrum)
 
-    def _ear(self, paths: EchoPaths, ear: int) -> ComplexArray:
-        delay = paths.tof_s[ear] + self._start_s
-        decay = self._absorption * paths.length_m[ear][:, None]
-        ways = np.exp(-decay) * self._phases(delay)
-        if np.all(paths.doppler[ear] == 1.0):
-            total = (paths.amplitude[ear] @ ways) * self._sender
+    def peaks(self, paths: EchoPaths) -> FloatArray:
+        """Peak of each echo's envelope as a fraction of full scale, shape (2, n)."""
+        absorption = np.exp(-self.carrier_absorption * paths.length_m)
+        return np.asarray(np.abs(paths.amplitude) * absorption * self.pulse_peak[:, None])
+
+    def _ear(self, paths: EchoPaths, ear: int, audible: NDArray[np.intp]) -> ComplexArray:
+        doppler = paths.doppler[ear, audible]
+        amplitude = paths.amplitude[ear, audible]
+        length_m = paths.length_m[ear, audible]
+        ways = self._phases(paths.tof_s[ear, audible] + self._start_s)
+        ways *= np.exp(-self._absorption * length_m[:, None])
+        if np.all(doppler == 1.0):
+            total = (amplitude @ ways) * self._sender
         else:
-            total = np.einsum(
-                "n,nf,nf->f", paths.amplitude[ear], ways, self._emitted(paths.doppler[ear])
-            )
+            total = amplitude @ (ways * self._emitted(doppler))
         return np.asarray(total * self._receiver[ear])
 
     @property
@@ -102,12 +113,23 @@ class Synthesis:
 
         A burst s(t) received with the factor d is s(d t): its spectrum is S(f / d) / d.
         """
+        stretch = 1.0 / doppler[:, None]
+        position = _FINE * (self._bins * stretch - self._bins[0]) + _MARGIN
+        index = position.astype(np.intp)
+        part = position - index
+        table = self._emitted_table
+        return np.asarray(stretch * ((1.0 - part) * table[index] + part * table[index + 1]))
+
+    def _emission(self) -> ComplexArray:
+        """Spectrum of the emitted burst in steps of a quarter bin, somewhat beyond the band."""
         head = self.unit
-        frequency: FloatArray = self._frequency / doppler[:, None]
+        n = _FINE * (len(self._bins) - 1) + 2 * _MARGIN + 1
+        steps = self._bins[0] + (np.arange(n) - _MARGIN) / _FINE
+        frequency = np.asarray(steps * head.sample_rate_hz / self._n_fft, dtype=np.float64)
         burst = burst_spectrum(
             frequency, head.carrier_hz, self.config.burst_cycles, head.drive_waveform
         )
-        emitted = burst * resonance_response(head.transmitter, frequency) / doppler[:, None]
+        emitted = burst * resonance_response(head.transmitter, frequency)
         # A sine burst's analytic signal is -j times its baseband; half of it is in each bin.
         return np.asarray(-0.5j * self.level * head.sample_rate_hz * emitted)
 

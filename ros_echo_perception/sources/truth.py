@@ -67,10 +67,8 @@ class TruthMaker:
 
     def make(self, paths: EchoPaths, head_pose: Pose2) -> PingTruth:
         """Truth of one ping."""
-        synthesis = self._synthesis
-        absorption = np.exp(-synthesis.carrier_absorption * paths.length_m)
-        peak = np.abs(paths.amplitude) * absorption * synthesis.pulse_peak[:, None]
-        nyquist_hz = synthesis.unit.sample_rate_hz / 2.0
+        peak = self._synthesis.peaks(paths)
+        nyquist_hz = self._synthesis.unit.sample_rate_hz / 2.0
         noise = self._noise * self._bandwidth / nyquist_hz
         snr_db = _db(peak**2 / 2.0 / noise[:, None])
         energy_db = _db(peak**2 * self._energy_s[:, None] * nyquist_hz / self._noise)
