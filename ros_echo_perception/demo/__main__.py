@@ -16,8 +16,9 @@ from rich.console import Console
 from ..core.errors import EchoPerceptionError
 from ..nodes.settings import DriverSettings
 from ..offline.resources import shipped
+from ..sources.simulator_config import SimulatorConfig
 
-_DRIVER = DriverSettings()
+_DRIVER, _SIMULATOR = DriverSettings(), SimulatorConfig()
 _OUR_FILES = ("map.png", "parameters.yaml", "summary.txt", "summary.json")
 _OUR_FOLDERS = ("bag", "log")
 
@@ -32,12 +33,10 @@ _OUR_FOLDERS = ("bag", "log")
               help="Head file: a path, or one that ships with the package.")  # fmt: skip
 @click.option("--world", default="config/worlds/demo_room.yaml", show_default=True,
               help="World with the robot's path: a path, or one that ships.")  # fmt: skip
-@click.option("--rate", "rate_hz", default=_DRIVER.rate_hz, show_default=True,
+@click.option("--rate", "rate_hz", default=_SIMULATOR.ping_rate_hz, show_default=True,
               type=click.FloatRange(0.5, 27.0), help="Pings per second.")  # fmt: skip
-@click.option("--seed", default=_DRIVER.seed, show_default=True, help="Seed of the simulator.")
-def main(
-    out: Path, seconds: float, head: str, world: str, rate_hz: float, seed: int
-) -> None:
+@click.option("--seed", default=_SIMULATOR.seed, show_default=True, help="Seed of the simulator.")
+def main(out: Path, seconds: float, head: str, world: str, rate_hz: float, seed: int) -> None:
     """A simulated robot drives through a room; driver, processing and mapping run over DDS.
 
     While it runs a table shows rate, detections, latency and map; at the end there are a summary

@@ -68,9 +68,7 @@ def score_detections(
     )  # fmt: skip
 
 
-def match(
-    detections: Sequence[SeenDetection], truth: Sequence[TrueEcho]
-) -> list[tuple[int, int]]:
+def match(detections: Sequence[SeenDetection], truth: Sequence[TrueEcho]) -> list[tuple[int, int]]:
     """Pairs (detection, true echo) within the gates, most pairs first, then the nearest."""
     if not detections or not truth:
         return []

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import ctypes
 import os
 import signal
@@ -121,10 +122,8 @@ def _end_with_parent() -> None:
 
 
 def _signal_group(process: subprocess.Popen[bytes], sign: signal.Signals) -> None:
-    try:
+    with contextlib.suppress(ProcessLookupError):
         os.killpg(process.pid, sign)
-    except ProcessLookupError:
-        pass
 
 
 def _wait(nodes: Sequence[NodeProcess], grace_s: float) -> None:

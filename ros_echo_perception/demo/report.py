@@ -20,7 +20,7 @@ from .truth import TrueDrive, placed, pose_buffer
 
 def finish(plan: Plan, outcome: Outcome, console: Console) -> list[summary.Figure]:
     """Write picture and summary, and print what came out."""
-    truth = TrueDrive(plan)
+    truth = TrueDrive(plan, outcome.simulator())
     monitor = outcome.monitor
     pings = [monitor.pings[k] for k in sorted(monitor.pings)]
     outline = _outline(truth, monitor, pings)

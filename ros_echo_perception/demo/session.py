@@ -6,12 +6,14 @@ import threading
 import time
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 import rclpy
 from rclpy.executors import ExternalShutdownException, SingleThreadedExecutor
 from rich.console import Console
 
 from ..core.errors import SourceError
+from ..core.settings import from_mapping
 from ..nodes import topics
 from ..nodes.settings import DriverSettings
 from ..offline.bag_writer import BagWriter
@@ -38,8 +40,8 @@ class Plan:
     out: Path
     head: str = DriverSettings().head_file
     world: str = "config/worlds/demo_room.yaml"
-    rate_hz: float = DriverSettings().rate_hz
-    seed: int = DriverSettings().seed
+    rate_hz: float = SimulatorConfig().ping_rate_hz
+    seed: int = SimulatorConfig().seed
 
     def world_path(self) -> Path:
         """The world file: as given, or as shipped."""
@@ -50,9 +52,12 @@ class Plan:
         given: dict[str, object] = {"head_file": self.head} if node != "mapping" else {}
         if node == "driver":
             given |= {
-                "source": "simulator", "world_file": str(self.world_path()),
-                "rate_hz": self.rate_hz, "seed": self.seed, "wait_for_consumer_s": 10.0,
-            }  # fmt: skip
+                "source": "simulator",
+                "world_file": str(self.world_path()),
+                "simulator.ping_rate_hz": self.rate_hz,
+                "simulator.seed": self.seed,
+                "wait_for_consumer_s": 10.0,
+            }
         if node == "mapping":
             mount = SimulatorConfig().mount
             given = {
@@ -75,6 +80,17 @@ class Outcome:
     monitor: Monitor
     first_ping_s: float
     counts: dict[str, int]
+    parameters: dict[str, dict[str, Any]]
+
+    def simulator(self) -> SimulatorConfig:
+        """The settings with which the driver simulated."""
+        prefix = "simulator."
+        values = {
+            name.removeprefix(prefix): value
+            for name, value in self.parameters["driver"].items()
+            if name.startswith(prefix)
+        }
+        return from_mapping(SimulatorConfig, values)
 
 
 class _Spinner:
@@ -140,7 +156,8 @@ def run(plan: Plan, console: Console, started_s: float) -> Outcome:
             _wait_for_consumers(recorder, nodes, spinner)
             driver = _start(nodes, "driver", plan)
             first_s = _wait_for_first_ping(monitor, nodes, spinner) - started_s
-            write_parameters(read_parameters(recorder, NODES), plan.out / "parameters.yaml")
+            parameters = read_parameters(recorder, NODES)
+            write_parameters(parameters, plan.out / "parameters.yaml")
             _watch(plan, console, recorder, monitor, nodes, spinner)
             driver.stop()
             nodes.forget(driver)
@@ -149,7 +166,7 @@ def run(plan: Plan, console: Console, started_s: float) -> Outcome:
             spinner.close()
             recorder.destroy_node()
             rclpy.try_shutdown()
-    return Outcome(monitor, first_s, dict(bag.counts))
+    return Outcome(monitor, first_s, dict(bag.counts), parameters)
 
 
 def _start(nodes: NodeGroup, name: str, plan: Plan) -> NodeProcess:

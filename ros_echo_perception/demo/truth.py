@@ -28,9 +28,8 @@ _TRUE_FROM_DB = 0.0
 class TrueDrive:
     """What the driver's simulator played; ping numbers are those of the messages."""
 
-    def __init__(self, plan: Plan) -> None:
+    def __init__(self, plan: Plan, config: SimulatorConfig) -> None:
         world_path = plan.world_path()
-        config = SimulatorConfig(ping_rate_hz=plan.rate_hz, seed=plan.seed)
         self._simulator = SimulatorSource(
             load_head(find_head_file(plan.head)), load_world(world_path), load_path(world_path),
             config,
@@ -77,9 +76,7 @@ class TrueDrive:
 
 def outline_of(world: World) -> list[NDArray[np.float64]]:
     """All surfaces of a world as polylines, each of shape (n, 2)."""
-    lines = [
-        np.array([surface.start_m, surface.end_m], float) for surface in world.surfaces
-    ]
+    lines = [np.array([surface.start_m, surface.end_m], float) for surface in world.surfaces]
     angle = np.linspace(0.0, 2.0 * math.pi, _CIRCLE_POINTS)
     circle = np.column_stack((np.cos(angle), np.sin(angle)))
     lines += [np.array(r.centre_m) + r.radius_m * circle for r in world.rounds]
@@ -94,9 +91,7 @@ def pose_buffer(monitor: Monitor) -> PoseBuffer:
     return poses
 
 
-def placed(
-    pings: Sequence[SeenPing], poses: PoseBuffer, mount: Pose2
-) -> NDArray[np.float64]:
+def placed(pings: Sequence[SeenPing], poses: PoseBuffer, mount: Pose2) -> NDArray[np.float64]:
     """Places of the two-eared detections in the odometry frame, shape (n, 2)."""
     points = []
     for ping in pings:

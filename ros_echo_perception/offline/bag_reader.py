@@ -48,9 +48,7 @@ def open_bag(path: str | Path) -> Iterator[AnyReader]:
 
 def messages(reader: AnyReader, type_name: str, topic: str = "") -> Iterator[tuple[int, Any]]:
     """(time of receipt in ns, message) of one type, on one topic or on all."""
-    chosen = [
-        c for c in reader.connections if c.msgtype == type_name and topic in ("", c.topic)
-    ]
+    chosen = [c for c in reader.connections if c.msgtype == type_name and topic in ("", c.topic)]
     if not chosen:
         return
     for connection, time_ns, data in reader.messages(connections=chosen):
@@ -98,9 +96,7 @@ def odometry_from_message(message: Any) -> OdometrySample:
     """Planar odometry from its message (covariance of x, y, yaw as given)."""
     pose, turn = message.pose.pose, message.pose.pose.orientation
     yaw = float(
-        np.arctan2(
-            2.0 * (turn.w * turn.z + turn.x * turn.y), 1.0 - 2.0 * (turn.y**2 + turn.z**2)
-        )
+        np.arctan2(2.0 * (turn.w * turn.z + turn.x * turn.y), 1.0 - 2.0 * (turn.y**2 + turn.z**2))
     )
     covariance = np.asarray(message.pose.covariance, float).reshape(6, 6)
     return OdometrySample(

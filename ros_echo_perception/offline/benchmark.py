@@ -20,6 +20,7 @@ from ..core.acoustics import pulse_metrics
 from ..core.head import Head, load_head
 from ..core.perception import pipeline as chain
 from ..core.perception.config import ProcessingConfig
+from ..core.perception.fit import ObjectFitter
 from ..core.types import RawEcho
 from ..sources.robot_path import RobotPath
 from ..sources.simulator import SimulatorSource
@@ -36,7 +37,7 @@ STEPS = {
     "noise, blanking, faults": (chain, "condition"),
     "matched filter": (chain, "matched_filter"),
     "candidates (mixture, pairing)": (chain, "find_candidates"),
-    "joint fit of both ears": (chain.ObjectFitter, "fit"),
+    "joint fit of both ears": (ObjectFitter, "fit"),
     "bearing, sigmas, existence": (chain, "report_detections"),
 }
 """The steps of the chain: where the function of each one is looked up."""
@@ -123,9 +124,7 @@ def timed_steps() -> Iterator[dict[str, list[float]]]:
         yield seconds
 
 
-def measure(
-    name: str, pings: Sequence[RawEcho], head: Head, config: ProcessingConfig
-) -> Timing:
+def measure(name: str, pings: Sequence[RawEcho], head: Head, config: ProcessingConfig) -> Timing:
     """Time chain and baseline on the same pings, in turn, so that both meet the same machine."""
     pipeline = chain.EchoPipeline(head, config)
     sigma_s = pulse_metrics(head, 0, pings[0].burst_cycles).envelope_sigma_s
@@ -152,9 +151,7 @@ def measure(
 @click.option("--recording", type=click.Path(path_type=Path),
               help="Also time the pings of this recording.")  # fmt: skip
 @config_option
-def benchmark_command(
-    head: Path, pings: int, recording: Path | None, config: Path | None
-) -> None:
+def benchmark_command(head: Path, pings: int, recording: Path | None, config: Path | None) -> None:
     """Measure how long one ping takes, whole and by step.
 
     Pings are simulated with 0, 1, 4 and 8 poles in the beam. A plain peak picker (smoothed
@@ -198,10 +195,7 @@ def step_table(timings: Sequence[Timing]) -> Any:
     return table(
         "By step, median / 95 %, ms",
         ("step", *(t.name for t in timings)),
-        [
-            (step, *(_median_and_high(t.steps_s[step]) for t in timings))
-            for step in STEPS
-        ],
+        [(step, *(_median_and_high(t.steps_s[step]) for t in timings)) for step in STEPS],
     )
 
 

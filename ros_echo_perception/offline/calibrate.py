@@ -137,8 +137,11 @@ def _refused(path: Path, line: int, name: str, value: Any, allowed: str) -> File
 @click.argument("recordings", nargs=-1, required=True, type=click.Path(path_type=Path))
 @head_option(multiple=False)
 @out_option("Head file of this unit (YAML).")
-@click.option("--places", type=click.Path(path_type=Path),
-              help="Where the pole stood (CSV: ping, range_m, bearing_rad). Default: the sidecar.")  # fmt: skip
+@click.option(
+    "--places",
+    type=click.Path(path_type=Path),
+    help="Where the pole stood (CSV: ping, range_m, bearing_rad). Default: the sidecar.",
+)
 def calibrate_command(
     recordings: tuple[Path, ...], head: Path, out: Path, places: Path | None
 ) -> None:

@@ -89,9 +89,7 @@ def _from_bag(path: Path, topic: str) -> EchoInput:
     folder = path.parent if path.is_file() else path
     echoes, refused = [], 0
     with bag_reader.open_bag(folder) as reader:
-        topics = sorted(
-            {c.topic for c in reader.connections if c.msgtype == bag_reader.RAW_ECHO}
-        )
+        topics = sorted({c.topic for c in reader.connections if c.msgtype == bag_reader.RAW_ECHO})
         if not topic and len(topics) > 1:
             raise FileFormatError(
                 f"{path}: holds raw echoes of several heads; name one of the topics "

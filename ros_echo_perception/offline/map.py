@@ -155,10 +155,20 @@ def placed_detections(
 @head_option(multiple=False)
 @out_option("Map: .npz (arrays), or .yaml (PGM and YAML as map servers read them).")
 @click.option("--picture", type=click.Path(path_type=Path), help="Also draw it (PNG).")
-@click.option("--mount", nargs=3, type=float, metavar="X Y YAW",
-              help="Pose of the head in base_link (m, m, rad). Default: the recording's.")  # fmt: skip
-@click.option("--window", type=click.Choice(["drive", "settings"]), default="drive",
-              show_default=True, help="Size of the map: the whole drive, or as in the settings.")  # fmt: skip
+@click.option(
+    "--mount",
+    nargs=3,
+    type=float,
+    metavar="X Y YAW",
+    help="Pose of the head in base_link (m, m, rad). Default: the recording's.",
+)
+@click.option(
+    "--window",
+    type=click.Choice(["drive", "settings"]),
+    default="drive",
+    show_default=True,
+    help="Size of the map: the whole drive, or as in the settings.",
+)
 @click.option("--topic", default="", help="Topic of the raw echoes, for a bag with several.")
 @config_option
 def map_command(

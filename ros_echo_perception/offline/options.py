@@ -15,10 +15,17 @@ REFUSED_EXIT_CODE = 2
 NOTHING_EXIT_CODE = 1
 
 
+class NothingProcessedError(click.ClickException):
+    """There was nothing to do."""
+
+    exit_code = NOTHING_EXIT_CODE
+
+
 class EchoGroup(click.Group):
     """Turns the package's errors into one line on standard error and exit code 2."""
 
     def invoke(self, ctx: click.Context) -> Any:
+        """Run a command."""
         try:
             return super().invoke(ctx)
         except EchoPerceptionError as error:
@@ -29,9 +36,7 @@ class EchoGroup(click.Group):
 def need_something(count: int, what: str) -> None:
     """End with exit code 1 when nothing was processed."""
     if count == 0:
-        error = click.ClickException(f"nothing processed: the input holds no {what}.")
-        error.exit_code = NOTHING_EXIT_CODE
-        raise error
+        raise NothingProcessedError(f"nothing processed: the input holds no {what}.")
 
 
 def head_option(multiple: bool) -> Callable[[F], F]:

@@ -18,9 +18,9 @@ from numpy.typing import NDArray
 from ..core.types import Pose2
 
 PAPER = "#fbf8f1"
-UNKNOWN_CELL = "#e4dfd3"
-FREE_CELL = "#fbf8f1"
-DOUBTFUL_CELL = "#c9b79a"
+UNKNOWN_CELL = "#ece8df"
+FREE_CELL = "#ffffff"
+DOUBTFUL_CELL = "#d8c7a6"
 OCCUPIED_CELL = "#22333b"
 TRUTH = "#d1495b"
 PATH = "#00798c"

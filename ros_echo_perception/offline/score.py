@@ -6,7 +6,7 @@ import importlib.util
 import json
 import sys
 from collections.abc import Sequence
-from concurrent.futures import ProcessPoolExecutor
+from concurrent.futures import Future, ProcessPoolExecutor
 from dataclasses import dataclass
 from pathlib import Path
 from types import ModuleType
@@ -97,7 +97,8 @@ def score_all(data: DataSet, work: Path, use_nominal: bool = False) -> dict[str,
         jobs = [pool.submit(_detect_job, r.path, heads[r.unit]) for r in scenes]
         maps = [pool.submit(_map_job, r.path, heads[r.unit], work) for r in drives]
         progress.update(task, total=len(jobs) + len(maps))
-        for job in (*jobs, *maps):
+        waiting: list[Future[Any]] = [*jobs, *maps]
+        for job in waiting:
             job.add_done_callback(lambda _: progress.advance(task))
         outcomes = [job.result() for job in jobs]
         grids = [job.result() for job in maps]

@@ -12,15 +12,10 @@ import yaml
 from ..core.errors import FileFormatError, refuse
 from ..core.fields import read_yaml
 from ..core.settings import Settings, describe, from_mapping
-from ..nodes.settings import MappingNodeSettings, ProcessingNodeSettings
+from ..nodes.settings import SECTIONS
 
 SettingsT = TypeVar("SettingsT", bound=Settings)
-_NODES: dict[str, type[Settings]] = {
-    "processing": ProcessingNodeSettings,
-    "mapping": MappingNodeSettings,
-}
-_NOT_OURS = {"scan", "use_sim_time", "qos_overrides"}
-"""Parameters of the nodes that are neither settings of a stage nor of its node."""
+_OF_EVERY_NODE = {"use_sim_time", "qos_overrides"}
 
 
 def load_settings(path: str | Path | None, section: str, cls: type[SettingsT]) -> SettingsT:
@@ -45,15 +40,18 @@ def load_settings(path: str | Path | None, section: str, cls: type[SettingsT]) -
     data = load_yaml(path)
     ros = _ros_parameters(data, section)
     if ros is not None:
-        return from_mapping(cls, _without_node_parameters(ros, section), str(path))
+        return from_mapping(cls, _own(ros, section, cls), str(path))
     if isinstance(data.get(section), Mapping):
         data = data[section]
     return from_mapping(cls, data, str(path))
 
 
-def _without_node_parameters(ros: Mapping[str, Any], section: str) -> dict[str, Any]:
+def _own(ros: Mapping[str, Any], node: str, cls: type[Settings]) -> dict[str, Any]:
     """The stage's own settings; a misspelt name stays in and is refused later."""
-    others = {info.name for info in describe(_NODES[section])} | _NOT_OURS
+    others = set(_OF_EVERY_NODE)
+    for settings, prefix in SECTIONS[node].items():
+        if settings is not cls:
+            others |= {prefix} if prefix else {info.name for info in describe(settings)}
     return {name: value for name, value in ros.items() if name not in others}
 
 

@@ -33,9 +33,7 @@ _TRUTH_FROM_DB = 10.0  # weaker true echoes cannot be seen in the picture either
 @click.option("--ping", default=0, show_default=True, help="Number of the ping, from 0.")
 @out_option("Picture (PNG).")
 @config_option
-def show_command(
-    recording: Path, head: Path, ping: int, out: Path, config: Path | None
-) -> None:
+def show_command(recording: Path, head: Path, ping: int, out: Path, config: Path | None) -> None:
     """Draw one ping: both ears' envelopes, what was fitted, and where the echoes are.
 
     \b
@@ -93,15 +91,15 @@ def draw_ping(
         axes = figure.add_subplot(grid[ear, 0])
         _draw_envelope(axes, echo, result, ear, colour)
         axes.set_ylabel(f"{name}\nenvelope, fraction of full scale")
-    axes.set_xlabel("half the sound's way since emission, m; an echo begins at its line and peaks later")
+    axes.set_xlabel(
+        "half the sound's way since emission, m; an echo begins at its line and peaks later"
+    )
     _draw_plane(figure.add_subplot(grid[:, 1]), result, truth)
     figure.suptitle(title, x=0.01, ha="left", fontsize=12)
     return figure
 
 
-def _draw_envelope(
-    axes: Any, echo: RawEcho, result: PingResult, ear: int, colour: str
-) -> None:
+def _draw_envelope(axes: Any, echo: RawEcho, result: PingResult, ear: int, colour: str) -> None:
     samples = np.asarray(echo.samples[ear], float) / echo.full_scale
     time_s = echo.first_sample_offset_s + np.arange(samples.size) / echo.sample_rate_hz
     half_c = result.speed_of_sound_m_s / 2.0
@@ -129,9 +127,7 @@ def _draw_envelope(
 
 def _draw_plane(axes: Any, result: PingResult, truth: list[tuple[float, float]]) -> None:
     """Seen from above, x up, y to the left; bearing bars show one sigma."""
-    far = 1.05 * max(
-        [1.0, *(d.range_m for d in result.detections), *(r for r, _ in truth)]
-    )
+    far = 1.05 * max([1.0, *(d.range_m for d in result.detections), *(r for r, _ in truth)])
     for sign in (-1.0, 1.0):
         edge = sign * result.beam_half_width_rad
         axes.plot([0.0, -far * math.sin(edge)], [0.0, far * math.cos(edge)],
