@@ -18,12 +18,18 @@ class ProcessingConfig(Settings):
         1.22, "Bearings are looked for from minus to plus this angle", "rad", 0.2, 1.57
     )
     false_detections_per_ping: float = setting(
-        0.01, "Accepted rate of noise taken for an echo", "1/ping", 1e-6, 1.0
+        0.01, "Accepted rate of plain noise taken for an echo", "1/ping", 1e-6, 1.0
     )
     min_existence_probability: float = setting(
         0.5, "Echoes less likely than this are not reported", "", 0.0, 1.0
     )
     max_echoes: int = setting(12, "At most this many echoes are fitted in one ping", "", 1, 40)
+    velocity_sigma_m_s: float = setting(
+        0.7, "Usual radial speed between head and objects (1 sigma)", "m/s", 0.01, 10.0
+    )
+    temperature_sigma_c: float = setting(
+        0.3, "Error of the air temperature (1 sigma); it widens the range sigma", "degC", 0.0, 20.0
+    )
     default_temperature_c: float = setting(
         20.0, "Air temperature where the echo message has none", "degC", -40.0, 60.0
     )

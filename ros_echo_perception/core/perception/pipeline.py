@@ -2,20 +2,112 @@
 
 from __future__ import annotations
 
-from ..air import speed_of_sound
+import math
+
+import numpy as np
+
+from ..air import TEMPERATURE_RANGE_C, speed_of_sound
 from ..head import Head
-from ..types import PingResult, RawEcho
+from ..types import EnvelopeFit, PingFlag, PingResult, RawEcho
+from .baseband import Baseband, receiver_filter, to_baseband
+from .conditioning import Conditioned, condition
 from .config import ProcessingConfig
+from .fit import Explained, ObjectFitter
+from .model import HeadModel
+from .report import report_detections
+from .search import matched_filter
+from .seeds import find_candidates
+
+_NOMINAL_MODEL_ERROR = 0.05
+"""Share of an echo's amplitude that the template of an uncalibrated head may miss."""
 
 
 class EchoPipeline:
-    """Turns raw echoes of one head into detections; keeps nothing from ping to ping."""
+    """Turns the raw echoes of one head into detections, ping by ping.
+
+    Examples
+    --------
+    See ``process``; the same object serves a node, a recording and a test.
+    """
 
     def __init__(self, head: Head, config: ProcessingConfig | None = None) -> None:
         self.head = head
         self.config = config or ProcessingConfig()
+        self.model_error = float(head.calibration.get("model_error", _NOMINAL_MODEL_ERROR))
 
     def process(self, echo: RawEcho) -> PingResult:
-        """All echoes of one ping."""
-        c = speed_of_sound(20.0)
-        return PingResult(echo.emission_time_s, echo.sequence, (), c, 0.3, 5.0, 0.5, (0.0, 0.0))
+        """All echoes of one ping.
+
+        Parameters
+        ----------
+        echo : any sample rate, carrier below half of it; pulse and geometry follow the head.
+        """
+        model = self._model(echo)
+        baseband = to_baseband(echo, model.receiver)
+        ping = condition(baseband, echo, model, self.model_error)
+        matched = matched_filter(model, ping, ping.samples)
+        candidates = find_candidates(model, ping, matched, self.config.max_bearing_rad)
+        fitter = ObjectFitter(model, ping, self.config)
+        explained = fitter.fit(candidates)
+        detections = report_detections(model, ping, explained, self.config)
+        return PingResult(
+            emission_time_s=echo.emission_time_s,
+            sequence=echo.sequence,
+            detections=detections,
+            speed_of_sound_m_s=model.speed_m_s,
+            range_min_m=self._range_min(model, ping),
+            range_max_m=self._range_max(model, echo),
+            beam_half_width_rad=self.head.transmitter.half_power_beam_width_rad / 2.0,
+            noise=self._noise(model, ping),
+            flags=ping.flags | self._burst_flag(echo),
+            envelope=_envelope(baseband, ping, explained),
+        )
+
+    def reset(self) -> None:
+        """Forget earlier pings (time jumped, recording looped)."""
+
+    def _model(self, echo: RawEcho) -> HeadModel:
+        temperature = echo.temperature_c
+        if not math.isfinite(temperature):
+            temperature = self.config.default_temperature_c
+        humidity = echo.relative_humidity
+        if not math.isfinite(humidity):
+            humidity = self.config.default_relative_humidity
+        low, high = TEMPERATURE_RANGE_C
+        speed = speed_of_sound(min(max(temperature, low), high), min(max(humidity, 0.0), 1.0))
+        receiver = receiver_filter(self.head, echo.sample_rate_hz, echo.carrier_hz)
+        return HeadModel(self.head, speed, echo.burst_cycles, receiver)
+
+    def _burst_flag(self, echo: RawEcho) -> PingFlag:
+        known = self.head.calibration.get("burst_cycles")
+        if known is None or echo.burst_cycles in known:
+            return PingFlag.NONE
+        return PingFlag.BURST_UNCALIBRATED
+
+    @staticmethod
+    def _range_min(model: HeadModel, ping: Conditioned) -> float:
+        first_peak_s = ping.blanking_end_s - model.pulses[0].peak_time_s
+        return model.range_of_delay(max(first_peak_s, 0.0))
+
+    def _range_max(self, model: HeadModel, echo: RawEcho) -> float:
+        # The echo's body must lie inside the record.
+        last_delay_s = echo.end_time_s - model.pulses[0].peak_time_s
+        return min(model.range_of_delay(last_delay_s), self.config.max_range_m)
+
+    @staticmethod
+    def _noise(model: HeadModel, ping: Conditioned) -> tuple[float, float]:
+        share = [math.sqrt(p.noise_bandwidth_hz * ping.step_s / 2.0) for p in model.pulses]
+        return ping.noise_sigma[0] * share[0], ping.noise_sigma[1] * share[1]
+
+
+def _envelope(baseband: Baseband, ping: Conditioned, explained: Explained) -> EnvelopeFit:
+    sigma = [0.0 if math.isnan(s) else s for s in ping.noise_sigma]
+    factor = math.sqrt(explained.threshold)
+    return EnvelopeFit(
+        first_time_s=float(baseband.time_s[0]),
+        step_s=baseband.step_s,
+        measured=np.abs(baseband.samples),
+        fitted=np.abs(ping.samples - explained.residual),
+        threshold=(sigma[0] * factor, sigma[1] * factor),
+        blanking_end_s=ping.blanking_end_s,
+    )

@@ -1,0 +1,126 @@
+"""The received pulse as a template: complex baseband, evaluated at any time."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numpy as np
+
+from ..acoustics import echo_spectrum
+from ..head import Head
+from ..types import ComplexArray, FloatArray
+from .baseband import ReceiverFilter
+
+_OVERSAMPLING = 32
+_SPAN_S = 8e-3
+_LEAD_S = 1e-3
+_TAIL_AMPLITUDE = 3e-4
+
+
+@dataclass(frozen=True, eq=False)
+class PulseTemplate:
+    """Complex envelope of the pulse in one ear behind the receiver filter, peak magnitude 1.
+
+    Times count from the start of the drive. ``table`` and ``slope`` (its derivative by time)
+    are sampled every ``fine_step_s`` from ``first_time_s`` on; outside they are 0.
+    """
+
+    table: ComplexArray
+    slope: ComplexArray
+    first_time_s: float
+    fine_step_s: float
+    peak_time_s: float
+    envelope_sigma_s: float
+    energy_s: float
+    noise_bandwidth_hz: float
+
+    @property
+    def start_s(self) -> float:
+        """Before this the pulse is negligible."""
+        return self.first_time_s
+
+    @property
+    def end_s(self) -> float:
+        """After this the pulse is negligible."""
+        return self.first_time_s + (self.table.size - 1) * self.fine_step_s
+
+    def evaluate(self, time_s: FloatArray) -> tuple[ComplexArray, ComplexArray]:
+        """Value and derivative at times of any shape; linear between the fine samples."""
+        position = (time_s - self.first_time_s) / self.fine_step_s
+        np.clip(position, 0.0, self.table.size - 1.001, out=position)
+        index = position.astype(np.intp)
+        fraction = position - index
+        value = self.table[index]
+        value = value + fraction * (self.table[index + 1] - value)
+        slope = self.slope[index]
+        slope = slope + fraction * (self.slope[index + 1] - slope)
+        return value, slope
+
+    def sampled(self, step_s: float, offset_s: float = 0.0) -> ComplexArray:
+        """Samples at start_s + offset_s + k * step_s over the whole support."""
+        count = int((self.end_s - self.start_s - offset_s) / step_s) + 1
+        return self.evaluate(self.start_s + offset_s + np.arange(count) * step_s)[0]
+
+
+@lru_cache(maxsize=64)
+def _template(
+    head: _HeadKey, ear: int, burst_cycles: float, receiver: ReceiverFilter
+) -> PulseTemplate:
+    step_s = receiver.step_s / _OVERSAMPLING
+    n = int(_SPAN_S / step_s)
+    offset_hz = np.fft.fftfreq(n, step_s)
+    limit_hz = min(0.9 * head.head.carrier_hz, 1.5 / receiver.step_s)
+    band = np.abs(offset_hz) < limit_hz
+    spectrum = np.zeros(n, complex)
+    frequency_hz = head.head.carrier_hz + offset_hz[band]
+    spectrum[band] = echo_spectrum(head.head, ear, frequency_hz, burst_cycles)
+    spectrum[band] *= receiver.response(offset_hz[band])
+    spectrum[band] *= np.exp(-2j * math.pi * offset_hz[band] * _LEAD_S)
+    table = np.fft.ifft(spectrum)
+    magnitude = np.abs(table)
+    peak = int(np.argmax(magnitude))
+    table = table / magnitude[peak]
+    magnitude = magnitude / magnitude[peak]
+    slope = np.gradient(table, step_s)
+    used = np.nonzero(magnitude > _TAIL_AMPLITUDE)[0]
+    first, last = used[0], used[-1]
+    high = np.nonzero(magnitude >= 0.5)[0]
+    energy_s = float(np.sum(magnitude**2)) * step_s
+    power = np.abs(spectrum) ** 2
+    return PulseTemplate(
+        table=table[first : last + 2],
+        slope=slope[first : last + 2],
+        first_time_s=first * step_s - _LEAD_S,
+        fine_step_s=step_s,
+        peak_time_s=peak * step_s - _LEAD_S,
+        envelope_sigma_s=float(high[-1] - high[0]) * step_s / math.sqrt(8.0 * math.log(2.0)),
+        energy_s=energy_s,
+        noise_bandwidth_hz=float(np.sum(power) / np.max(power)) / (n * step_s),
+    )
+
+
+class _HeadKey:
+    """Lets a head (with its unhashable notes on calibration) serve as a cache key."""
+
+    def __init__(self, head: Head) -> None:
+        self.head = head
+        self._key = (
+            head.carrier_hz, head.drive_waveform, head.transmitter, head.left, head.right,
+        )  # fmt: skip
+
+    def __hash__(self) -> int:
+        return hash(self._key)
+
+    def __eq__(self, other: object) -> bool:
+        return isinstance(other, _HeadKey) and self._key == other._key
+
+
+def pulse_templates(
+    head: Head, burst_cycles: float, receiver: ReceiverFilter
+) -> tuple[PulseTemplate, PulseTemplate]:
+    """Templates of both ears (left, right) for a burst length; computed once and kept."""
+    key = _HeadKey(head)
+    left, right = (_template(key, ear, float(burst_cycles), receiver) for ear in (0, 1))
+    return left, right

@@ -1,0 +1,132 @@
+"""From fitted objects to detections: bearings with all their peaks, sigmas, SNR, flags."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+
+from ..air import speed_of_sound
+from ..types import Detection, DetectionFlag, Ears, FloatArray
+from .bearing import BearingPosterior, bearing_posterior
+from .conditioning import Conditioned
+from .config import ProcessingConfig
+from .fit import Explained
+from .joint import remove, window_of
+from .model import HeadModel
+from .search import bearing_grid, scan
+
+_POSTERIOR_HALF_WIDTH_M = 0.012
+_HEARD_DB = 8.0
+"""An ear hears an echo from this SNR on; below, noise reaches it now and then."""
+
+
+def report_detections(
+    model: HeadModel, ping: Conditioned, explained: Explained, config: ProcessingConfig
+) -> tuple[Detection, ...]:
+    """Detections of one ping, nearest first."""
+    bearings = bearing_grid(model, config.max_bearing_rad)
+    found = [
+        _detection(model, ping, explained, i, bearings, config)
+        for i in range(len(explained.objects))
+    ]
+    wanted = [
+        d
+        for d in found
+        if d.existence_probability >= config.min_existence_probability
+        and d.range_m <= config.max_range_m
+    ]
+    return tuple(sorted(wanted, key=lambda d: d.range_m))
+
+
+def _detection(
+    model: HeadModel,
+    ping: Conditioned,
+    explained: Explained,
+    i: int,
+    bearings: FloatArray,
+    config: ProcessingConfig,
+) -> Detection:
+    objects = explained.objects
+    one = objects.take([i])
+    range_m, bearing_rad = float(one.range_m[0]), float(one.bearing_rad[0])
+    others = objects.take([j for j in range(len(objects)) if j != i])
+    alone = remove(model, ping, others, ping.samples)
+    found = scan(model, ping, alone, range_m, _POSTERIOR_HALF_WIDTH_M, bearings)
+    covariance = explained.covariance[i]
+    fitted_sigma = math.sqrt(max(float(covariance[1, 1]), 1e-12))
+    posterior = bearing_posterior(found, bearing_rad, fitted_sigma)
+    amplitude, snr_db = _per_ear(model, ping, explained, i)
+    window = window_of(model, ping, one)
+    flags = _flags(ping, window, posterior)
+    velocity_sigma = math.sqrt(float(covariance[2, 2]))
+    informative = velocity_sigma < 0.7 * config.velocity_sigma_m_s
+    return Detection(
+        range_m=range_m,
+        bearing_rad=posterior.bearing_rad,
+        range_sigma_m=_range_sigma(range_m, float(covariance[0, 0]), model, config),
+        bearing_sigma_rad=posterior.sigma_rad,
+        bearing_min_rad=posterior.interval_rad[0],
+        bearing_max_rad=posterior.interval_rad[1],
+        range_bearing_covariance=float(covariance[0, 1]) if not posterior.ambiguous else 0.0,
+        alternatives=posterior.alternatives,
+        ear_amplitude=amplitude,
+        ear_snr_db=snr_db,
+        ears=_ears(ping, snr_db),
+        existence_probability=_existence(float(explained.gain[i]), explained.threshold, config),
+        envelope_sigma_s=model.pulses[0].envelope_sigma_s,
+        radial_velocity_m_s=float(one.velocity_m_s[0]) if informative else math.nan,
+        radial_velocity_sigma_m_s=velocity_sigma if informative else math.nan,
+        flags=flags,
+    )
+
+
+def _range_sigma(
+    range_m: float, variance_m2: float, model: HeadModel, config: ProcessingConfig
+) -> float:
+    # A wrong temperature stretches all ranges: d ln c / dT is about 0.18 % per kelvin.
+    slope = (speed_of_sound(21.0) - speed_of_sound(20.0)) / model.speed_m_s
+    return math.hypot(math.sqrt(max(variance_m2, 0.0)), range_m * slope * config.temperature_sigma_c)
+
+
+def _per_ear(
+    model: HeadModel, ping: Conditioned, explained: Explained, i: int
+) -> tuple[tuple[float, float], tuple[float, float]]:
+    one = explained.objects.take([i])
+    gain = model.geometry(one.range_m, one.bearing_rad).gain[:, 0]
+    amplitude, snr = [], []
+    for ear, pulse in enumerate(model.pulses):
+        if not ping.alive[ear]:
+            amplitude.append(math.nan)
+            snr.append(-math.inf)
+            continue
+        peak = float(gain[ear] * abs(one.strength[0]))
+        noise2 = ping.noise_sigma[ear] ** 2 * pulse.noise_bandwidth_hz * ping.step_s
+        amplitude.append(peak)
+        snr.append(10.0 * math.log10(max(peak**2 / noise2, 1e-12)))
+    return (amplitude[0], amplitude[1]), (snr[0], snr[1])
+
+
+def _ears(ping: Conditioned, snr_db: tuple[float, float]) -> Ears:
+    heard = [ping.alive[ear] and snr_db[ear] >= _HEARD_DB for ear in range(2)]
+    if heard[0] and not heard[1]:
+        return Ears.LEFT_ONLY
+    if heard[1] and not heard[0]:
+        return Ears.RIGHT_ONLY
+    return Ears.BOTH
+
+
+def _flags(ping: Conditioned, window: slice, posterior: BearingPosterior) -> DetectionFlag:
+    flags = DetectionFlag.NONE
+    if ping.clipped[:, window].any():
+        flags |= DetectionFlag.SATURATED
+    if posterior.ambiguous:
+        flags |= DetectionFlag.BEARING_AMBIGUOUS
+    if float(ping.time_s[window.start]) < ping.blanking_end_s:
+        flags |= DetectionFlag.NEAR_DIRECT_PULSE
+    return flags
+
+
+def _existence(gain: float, threshold: float, config: ProcessingConfig) -> float:
+    """Odds against noise: at the threshold noise and echoes are about equally frequent."""
+    return 1.0 / (1.0 + math.exp(-min(gain - threshold, 50.0)))

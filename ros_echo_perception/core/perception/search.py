@@ -1,0 +1,141 @@
+"""Where could an object be? Matched filters of each ear and coherent scans over bearing."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.lib.stride_tricks import sliding_window_view
+
+from ..types import ComplexArray, FloatArray
+from .conditioning import Conditioned
+from .model import HeadModel
+
+_FINE = 8
+_RANGE_STEP_M = 4e-3
+_PHASE_STEPS = 10
+
+
+def matched_filter(model: HeadModel, ping: Conditioned, samples: ComplexArray) -> FloatArray:
+    """Amplitude behind the pulse-matched filter in units of its noise, shape (2, n).
+
+    Element k belongs to the delay ``time_s[k]`` (start of the drive to arrival); in noise its
+    square is exponential with mean 1.
+    """
+    result = np.zeros(samples.shape)
+    for ear, pulse in enumerate(model.pulses):
+        template = pulse.sampled(ping.step_s, -pulse.start_s % ping.step_s)
+        lead = int(round((-pulse.start_s) // ping.step_s))
+        weight2 = ping.weight[ear] ** 2
+        n, size = samples.shape[1], template.size
+        padded = np.zeros((2, n + size), complex)
+        padded[0, lead : lead + n] = samples[ear] * weight2
+        padded[1, lead : lead + n] = weight2
+        windows = sliding_window_view(padded, size, axis=1)[:, :n]
+        match = windows[0] @ template.conj()
+        energy = windows[1].real @ np.abs(template) ** 2
+        full = float(np.sum(np.abs(template) ** 2)) * float(np.median(weight2[weight2 > 0])) if (
+            weight2 > 0
+        ).any() else 1.0
+        # Where most of the pulse is masked, a match says nothing.
+        good = energy > 1e-3 * full
+        result[ear, good] = np.abs(match[good]) / np.sqrt(energy[good])
+    return result
+
+
+def bearing_grid(model: HeadModel, max_bearing_rad: float) -> FloatArray:
+    """Bearings fine enough that no lobe of the carrier's phase falls between two."""
+    wavelength_m = model.speed_m_s / model.receiver.carrier_hz
+    step = wavelength_m / max(model.head.baseline_m, wavelength_m) / _PHASE_STEPS
+    count = int(math.ceil(max_bearing_rad / step))
+    return np.linspace(-max_bearing_rad, max_bearing_rad, 2 * count + 1)
+
+
+@dataclass(frozen=True, eq=False)
+class Scan:
+    """Log-likelihood gain (nats) of one object over range and bearing.
+
+    ``gain`` has shape (n_range, n_bearing) and includes the log prior of the bearing;
+    ``strength`` is the best complex strength there.
+    """
+
+    range_m: FloatArray
+    bearing_rad: FloatArray
+    gain: FloatArray
+    strength: ComplexArray
+
+    def best(self) -> tuple[float, float, complex, float]:
+        """Range, bearing, strength and gain of the best place."""
+        i, j = np.unravel_index(int(np.argmax(self.gain)), self.gain.shape)
+        return (
+            float(self.range_m[i]),
+            float(self.bearing_rad[j]),
+            complex(self.strength[i, j]),
+            float(self.gain[i, j]),
+        )
+
+
+def scan(
+    model: HeadModel,
+    ping: Conditioned,
+    samples: ComplexArray,
+    range_m: float,
+    half_width_m: float,
+    bearing_rad: FloatArray,
+) -> Scan:
+    """Gain of one object near a range for all bearings, both ears coherent.
+
+    Notes
+    -----
+    gain = |sum_e g_e conj(phase_e) b_e|^2 / sum_e g_e^2 e_e with b and e the weighted match and
+    energy of the pulse at each ear's delay: the likelihood ratio of one object of unknown
+    complex strength in Gaussian noise. The prior of a bearing is proportional to the better
+    ear's gain: an object far off the beams must be so much stronger to be heard.
+    """
+    steps = max(1, int(round(half_width_m / _RANGE_STEP_M)))
+    offset_m = np.linspace(-half_width_m, half_width_m, 2 * steps + 1)
+    geometry = model.geometry(np.full(bearing_rad.shape, range_m), bearing_rad)
+    shift_s = 2.0 * offset_m / model.speed_m_s
+    match = np.zeros((offset_m.size, bearing_rad.size), complex)
+    energy = np.zeros((offset_m.size, bearing_rad.size))
+    phase = model.carrier(geometry).conj()
+    for ear in range(2):
+        delay = geometry.delay_s[ear]
+        b, e = _correlate(
+            model, ping, samples, ear, delay[None, :] + shift_s[:, None]
+        )
+        match += geometry.gain[ear] * phase[ear] * b
+        energy += geometry.gain[ear] ** 2 * e
+    safe = np.maximum(energy, 1e-30)
+    # The range shift turns the carrier of both ears alike: it only turns the strength.
+    turn = np.exp(1j * model.omega * shift_s)[:, None]
+    prior = np.log(np.maximum(geometry.gain.max(axis=0), 1e-3))
+    gain = np.abs(match) ** 2 / safe + prior
+    return Scan(range_m + offset_m, bearing_rad, gain, match * turn / safe)
+
+
+def _correlate(
+    model: HeadModel, ping: Conditioned, samples: ComplexArray, ear: int, delay_s: FloatArray
+) -> tuple[ComplexArray, FloatArray]:
+    """Weighted match and energy of an ear's pulse at delays of any shape (interpolated)."""
+    pulse = model.pulses[ear]
+    fine = ping.step_s / _FINE
+    low, high = float(delay_s.min()) - fine, float(delay_s.max()) + 2 * fine
+    grid = low + fine * np.arange(int((high - low) / fine) + 1)
+    start = int(np.searchsorted(ping.time_s, low + pulse.start_s))
+    stop = int(np.searchsorted(ping.time_s, high + pulse.end_s))
+    if stop <= start:
+        return np.zeros(delay_s.shape, complex), np.zeros(delay_s.shape)
+    time = ping.time_s[start:stop]
+    shape = pulse.evaluate(time[None, :] - grid[:, None])[0]
+    weight2 = ping.weight[ear, start:stop] ** 2
+    b = shape.conj() @ (samples[ear, start:stop] * weight2)
+    e = np.abs(shape) ** 2 @ weight2
+    position = (delay_s - low) / fine
+    index = np.minimum(position.astype(np.intp), grid.size - 2)
+    fraction = position - index
+    return (
+        b[index] + fraction * (b[index + 1] - b[index]),
+        e[index] + fraction * (e[index + 1] - e[index]),
+    )
