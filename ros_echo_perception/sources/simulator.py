@@ -13,8 +13,9 @@ from collections.abc import Iterator, Sequence
 
 import numpy as np
 
+from ..core.errors import SourceError, refuse
 from ..core.head import Head
-from ..core.types import FloatArray, OdometrySample, Pose2, RawEcho
+from ..core.types import FloatArray, Pose2, RawEcho
 from .base import Event, SourceInfo
 from .echo_paths import EchoPaths, HeadMotion, trace
 from .front_end import FULL_SCALE, FrontEnd
@@ -40,6 +41,8 @@ class SimulatorSource:
         Where the robot is.
     config
         Everything else.
+    start_offset_s
+        `events` leaves out this much of the beginning.
     """
 
     def __init__(
@@ -48,7 +51,12 @@ class SimulatorSource:
         world: World | Sequence[World],
         path: RobotPath,
         config: SimulatorConfig | None = None,
+        start_offset_s: float = 0.0,
     ) -> None:
+        if not 0.0 <= start_offset_s < path.duration_s:
+            allowed = f"0 to less than {path.duration_s:.3f} s, the length of the path"
+            raise SourceError(refuse("start_offset_s", start_offset_s, allowed))
+        self._start_s = start_offset_s
         self.config = config or SimulatorConfig()
         self.head = head
         self.unit = individual_unit(head, self.config.seed, self.config.unit_error_scale)
@@ -85,8 +93,8 @@ class SimulatorSource:
             kind="simulator",
             description=f"SIMULATED head {self.head.name} in world {self.world.name}, "
             f"seed {self.config.seed}",
-            duration_s=self.path.duration_s,
-            n_pings=self.n_pings,
+            duration_s=self.path.duration_s - self._start_s,
+            n_pings=self.n_pings - self._first_ping(),
             has_odometry=True,
             mount=self.config.mount,
         )
@@ -137,9 +145,9 @@ class SimulatorSource:
 
     def events(self) -> Iterator[Event]:
         """Pings and odometry in the order of time."""
-        odometry: Iterator[OdometrySample] = iter(self.odometry)
+        odometry = (sample for sample in self.odometry if sample.time_s >= self._start_s)
         waiting = next(odometry, None)
-        for k in range(self.n_pings):
+        for k in range(self._first_ping(), self.n_pings):
             while waiting is not None and waiting.time_s <= self.emission_time_s(k):
                 yield waiting
                 waiting = next(odometry, None)
@@ -150,6 +158,10 @@ class SimulatorSource:
 
     def close(self) -> None:
         """Nothing to release."""
+
+    def _first_ping(self) -> int:
+        late = (k for k in range(self.n_pings) if self.emission_time_s(k) >= self._start_s)
+        return next(late, self.n_pings)
 
     def _paths(self, k: int) -> EchoPaths:
         motion = self.head_motion(self.emission_time_s(k))
