@@ -49,7 +49,7 @@ class PulseTemplate:
     def evaluate(self, time_s: FloatArray) -> tuple[ComplexArray, ComplexArray]:
         """Value and derivative at times of any shape; linear between the fine samples."""
         position = (time_s - self.first_time_s) / self.fine_step_s
-        np.clip(position, 0.0, self.table.size - 1.001, out=position)
+        np.clip(position, 0.0, self.table.size - 1 - 1e-9, out=position)
         index = position.astype(np.intp)
         fraction = position - index
         value = self.table[index]
@@ -90,8 +90,8 @@ def _template(
     energy_s = float(np.sum(magnitude**2)) * step_s
     power = np.abs(spectrum) ** 2
     return PulseTemplate(
-        table=table[first : last + 2],
-        slope=slope[first : last + 2],
+        table=_zero_ended(table[first : last + 2]),
+        slope=_zero_ended(slope[first : last + 2]),
         first_time_s=first * step_s - _LEAD_S,
         fine_step_s=step_s,
         peak_time_s=peak * step_s - _LEAD_S,
@@ -99,6 +99,13 @@ def _template(
         energy_s=energy_s,
         noise_bandwidth_hz=float(np.sum(power) / np.max(power)) / (n * step_s),
     )
+
+
+def _zero_ended(values: ComplexArray) -> ComplexArray:
+    """Look-ups outside are clamped to the ends, which must therefore be 0."""
+    values = values.copy()
+    values[0] = values[-1] = 0.0
+    return values
 
 
 class _HeadKey:
