@@ -25,6 +25,7 @@ References
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -64,14 +65,15 @@ class Paths:
 def arc_samples(
     hypotheses: Hypotheses, resolution_m: float, surface_width_m: float = 0.0
 ) -> Samples:
-    """Points every half cell over each hypothesis, weights adding up to its weight."""
+    """Points over each hypothesis, no more than half a cell apart across the line of sight and a
+    quarter along it, weights adding up to its weight."""
     h = hypotheses
     range_sigma = np.hypot(h.range_sigma_m, _MIN_RANGE_SIGMA_CELLS * resolution_m)
     range_span = _SPAN_SIGMAS * range_sigma
     spread = np.hypot(h.spread_rad, surface_width_m / h.range_m)
     bearing_span = np.where(h.uniform, h.spread_rad, _SPAN_SIGMAS * spread)
-    n_range = _count(2.0 * range_span, resolution_m)
-    n_bearing = _count(2.0 * bearing_span * h.range_m, resolution_m)
+    n_range = _count(2.0 * range_span, 0.25 * resolution_m, 5)
+    n_bearing = _count(2.0 * bearing_span * h.range_m, 0.5 * resolution_m, 11)
     owner, k = _ragged(n_range * n_bearing)
     across, along = k % n_bearing[owner], k // n_bearing[owner]
     u = -1.0 + 2.0 * along / (n_range[owner] - 1)
@@ -92,26 +94,28 @@ def arc_samples(
 def path_samples(
     hypotheses: Hypotheses, resolution_m: float, range_min_m: float, half_width_m: float
 ) -> Paths:
-    """Points every cell along the paths of the firm hypotheses, from the nearest measurable
-    range to shortly before the reflector; weight = probability that the path crosses there.
+    """Points that leave no cell out along the paths of the firm hypotheses.
 
-    Nearer than the nearest measurable range nothing is cleared: what the head cannot hear
-    there is kept.
+    The paths run from the nearest measurable range to shortly before the reflector; weight =
+    probability that the sound really passed there. Nearer than the nearest measurable range
+    nothing is cleared: what the head cannot hear there is kept.
     """
     h = hypotheses
+    # On a square lattice of this pitch no circle of one cell's width fits between the points.
+    step = resolution_m / math.sqrt(2.0)
     end = h.range_m - np.maximum(3.0 * h.range_sigma_m, _MARGIN_CELLS * resolution_m)
-    n_along = np.floor((end - range_min_m) / resolution_m).astype(np.int64) + 1
+    n_along = np.floor((end - range_min_m) / step).astype(np.int64) + 1
     n_along = np.where(h.soft | (n_along < 0), 0, n_along)
-    n_across = 2 * int(np.ceil(half_width_m / resolution_m)) + 1
-    owner, k = _ragged(n_along * n_across)
-    across, along = k % n_across - n_across // 2, k // n_across
-    distance = range_min_m + along * resolution_m
-    offset = across * (half_width_m / max(n_across // 2, 1))
+    n_side = math.ceil(half_width_m / step)
+    owner, k = _ragged(n_along * (2 * n_side + 1))
+    across, along = k % (2 * n_side + 1) - n_side, k // (2 * n_side + 1)
+    distance = range_min_m + along * step
+    offset = across * (half_width_m / max(n_side, 1))
     angle = (h.head_yaw_rad + h.bearing_rad)[owner]
     c, s = np.cos(angle), np.sin(angle)
     lateral_sigma = np.maximum(distance * h.spread_rad[owner], 1e-9)
     half_m = max(half_width_m, 0.5 * resolution_m)
-    crossing = np.asarray(erf(half_m / lateral_sigma / np.sqrt(2.0)), float)
+    crossing = np.asarray(erf(half_m / lateral_sigma / math.sqrt(2.0)), float)
     samples = Samples(
         owner,
         h.head_x_m[owner] + distance * c - offset * s,
@@ -167,10 +171,10 @@ def silent_samples(
     return x.ravel(), y.ravel()
 
 
-def _count(length_m: FloatArray, resolution_m: float) -> IntArray:
-    """Points on a stretch so that they lie no more than half a cell apart, at least 3."""
-    n = np.ceil(length_m / (0.5 * resolution_m)).astype(np.int64) + 1
-    return np.clip(n, 3, _MAX_ARC_SAMPLES)
+def _count(length_m: FloatArray, pitch_m: float, at_least: int) -> IntArray:
+    """Points on a stretch so that they lie no further apart than the pitch."""
+    n = np.ceil(length_m / pitch_m).astype(np.int64) + 1
+    return np.clip(n, at_least, _MAX_ARC_SAMPLES)
 
 
 def _ragged(counts: IntArray) -> tuple[IntArray, IntArray]:
