@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 import time
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import ExitStack, contextmanager
@@ -22,10 +21,7 @@ from ..core.perception import pipeline as chain
 from ..core.perception.config import ProcessingConfig
 from ..core.perception.fit import ObjectFitter
 from ..core.types import RawEcho
-from ..sources.robot_path import RobotPath
-from ..sources.simulator import SimulatorSource
-from ..sources.simulator_config import SimulatorConfig
-from ..sources.world import Round, World
+from ..sources.bench import bench_source, poles
 from .console import output, quantile, table
 from .inputs import open_input
 from .options import config_option, head_option, need_something
@@ -58,20 +54,9 @@ class Timing:
 
 def simulated_pings(head: Head, n_echoes: int, n_pings: int) -> list[RawEcho]:
     """Pings with so many poles in the beam, 0.3 m apart in range, to both sides in turn."""
-    poles = tuple(
-        Round(f"pole{i}", "pole", _place(0.7 + 0.3 * i, 0.25 * (-1) ** i), 0.03)
-        for i in range(n_echoes)
-    )
-    config = SimulatorConfig(mount_x_m=0.0)
-    duration_s = (n_pings + 2) / config.ping_rate_hz
-    source = SimulatorSource(
-        head, World("benchmark", (), poles), RobotPath.standing(duration_s=duration_s), config
-    )
+    places = [(0.7 + 0.3 * i, 0.25 * (-1) ** i) for i in range(n_echoes)]
+    source = bench_source(head, poles(*places), n_pings=n_pings)
     return [source.echo(k) for k in range(n_pings)]
-
-
-def _place(range_m: float, bearing_rad: float) -> tuple[float, float]:
-    return range_m * math.cos(bearing_rad), range_m * math.sin(bearing_rad)
 
 
 def peak_picker(echo: RawEcho, sigma_s: float) -> list[tuple[float, float]]:

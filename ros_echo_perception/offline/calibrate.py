@@ -6,11 +6,10 @@ import csv
 import math
 from collections.abc import Sequence
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import click
 
-from ..core.calibration import CalibrationReport, calibrate_head
 from ..core.errors import FileFormatError, refuse
 from ..core.fields import read_text
 from ..core.head import Head, load_head, save_head
@@ -19,6 +18,9 @@ from .console import output, table
 from .heads import head_for
 from .inputs import EchoInput, open_input
 from .options import head_option, need_something, out_option
+
+if TYPE_CHECKING:
+    from ..core.calibration import CalibrationReport
 
 Place = tuple[float, float]
 """Range (m) and bearing (rad) of the pole from the head's reference point."""
@@ -47,6 +49,8 @@ def calibrate_inputs(
     CalibrationError
         When the data cannot determine the values.
     """
+    from ..core.calibration import calibrate_head
+
     sources = [open_input(path) for path in paths]
     if places is not None and len(sources) > 1:
         raise FileFormatError(

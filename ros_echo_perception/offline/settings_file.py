@@ -28,7 +28,7 @@ def load_settings(path: str | Path | None, section: str, cls: type[SettingsT]) -
         file with a node of that name (its parameters that are not settings of the stage, such as
         frames and topics, are left alone).
     section
-        ``processing`` or ``mapping``.
+        ``processing``, ``mapping`` or ``simulator``.
 
     Raises
     ------
@@ -38,12 +38,19 @@ def load_settings(path: str | Path | None, section: str, cls: type[SettingsT]) -
     if path is None:
         return cls()
     data = load_yaml(path)
-    ros = _ros_parameters(data, section)
+    node, prefix = _home(cls)
+    ros = _ros_parameters(data, node)
     if ros is not None:
-        return from_mapping(cls, _own(ros, section, cls), str(path))
+        values = ros.get(prefix) or {} if prefix else _own(ros, node, cls)
+        return from_mapping(cls, values, str(path))
     if isinstance(data.get(section), Mapping):
         data = data[section]
     return from_mapping(cls, data, str(path))
+
+
+def _home(cls: type[Settings]) -> tuple[str, str]:
+    """The node that has these settings, and the prefix of their names there."""
+    return next((node, classes[cls]) for node, classes in SECTIONS.items() if cls in classes)
 
 
 def _own(ros: Mapping[str, Any], node: str, cls: type[Settings]) -> dict[str, Any]:
