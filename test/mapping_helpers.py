@@ -18,17 +18,17 @@ SOUND_M_S = 343.0
 
 def detection(range_m, bearing_rad, sigma_rad=0.01, **values):
     """A two-sided echo; the range is certain to 2 mm."""
-    fields = dict(
-        range_m=range_m,
-        bearing_rad=bearing_rad,
-        range_sigma_m=0.002,
-        bearing_sigma_rad=sigma_rad,
-        bearing_min_rad=bearing_rad - 2 * sigma_rad,
-        bearing_max_rad=bearing_rad + 2 * sigma_rad,
-        ear_amplitude=(0.1, 0.1),
-        ear_snr_db=(25.0, 25.0),
-        existence_probability=0.99,
-    )
+    fields = {
+        "range_m": range_m,
+        "bearing_rad": bearing_rad,
+        "range_sigma_m": 0.002,
+        "bearing_sigma_rad": sigma_rad,
+        "bearing_min_rad": bearing_rad - 2 * sigma_rad,
+        "bearing_max_rad": bearing_rad + 2 * sigma_rad,
+        "ear_amplitude": (0.1, 0.1),
+        "ear_snr_db": (25.0, 25.0),
+        "existence_probability": 0.99,
+    }
     return Detection(**(fields | values))
 
 
@@ -45,17 +45,17 @@ def one_sided(range_m, low_rad, high_rad):
 
 def ping(time_s, *detections, flags=PingFlag.NONE, **values):
     """A ping that could hear from 0.3 to 5 m within 30 degrees to either side."""
-    fields = dict(
-        emission_time_s=time_s,
-        sequence=0,
-        detections=tuple(detections),
-        speed_of_sound_m_s=SOUND_M_S,
-        range_min_m=0.3,
-        range_max_m=5.0,
-        beam_half_width_rad=math.radians(30),
-        noise=(1e-4, 1e-4),
-        flags=flags,
-    )
+    fields = {
+        "emission_time_s": time_s,
+        "sequence": 0,
+        "detections": tuple(detections),
+        "speed_of_sound_m_s": SOUND_M_S,
+        "range_min_m": 0.3,
+        "range_max_m": 5.0,
+        "beam_half_width_rad": math.radians(30),
+        "noise": (1e-4, 1e-4),
+        "flags": flags,
+    }
     return PingResult(**(fields | values))
 
 
