@@ -10,6 +10,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus, KeyValue
+from rclpy.clock import Clock, ClockType
 from rclpy.node import Node
 
 from .qos import create_publisher
@@ -116,8 +117,6 @@ class Reporter:
         self._publisher.publish(array)
 
 
-def steady_clock():  # type: ignore[no-untyped-def]
+def steady_clock() -> Clock:
     """A clock that neither simulated time nor a correction of the system clock moves."""
-    from rclpy.clock import Clock, ClockType
-
     return Clock(clock_type=ClockType.STEADY_TIME)

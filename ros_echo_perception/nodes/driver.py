@@ -4,19 +4,21 @@ from __future__ import annotations
 
 import threading
 import time
+from typing import Any
 
 from rclpy.node import Node
 from rosgraph_msgs.msg import Clock
 
 from ..core.types import OdometrySample, RawEcho
 from ..sources.base import Event, SourceInfo
+from ..sources.simulator_config import SimulatorConfig
 from . import conversion, topics, transforms
 from .diagnostics import ERROR, OK, WARN, Reporter, Status
 from .parameters import ParameterSet
 from .player import ConsumerGate, SourcePlayer, marked
 from .qos import create_publisher, create_subscription
 from .runtime import run
-from .settings import DriverSettings
+from .settings import SECTIONS, DriverSettings
 from .source import open_configured
 
 _TEMPERATURE_PERIOD_S = 1.0
@@ -27,8 +29,9 @@ class DriverNode(Node):
 
     def __init__(self) -> None:
         super().__init__("driver")
-        self.settings = ParameterSet(self, {DriverSettings: ""}).get(DriverSettings)
-        source = open_configured(self.settings)
+        parameters = ParameterSet(self, SECTIONS["driver"])
+        self.settings = parameters.get(DriverSettings)
+        source = open_configured(self.settings, parameters.get(SimulatorConfig))
         self.info = source.info
         self._create_publishers()
         self._origin_s = time.time()  # ROS time of the source's first event
@@ -54,7 +57,7 @@ class DriverNode(Node):
         self._raw = create_publisher(self, topics.RAW_ECHO)
         self._temperature = create_publisher(self, topics.TEMPERATURE)
         self._odometry = create_publisher(self, topics.ODOMETRY) if self.info.has_odometry else None
-        self._clock = create_publisher(self, topics.CLOCK) if self.settings.publish_clock else None
+        self._clock_publisher = create_publisher(self, topics.CLOCK) if self.settings.publish_clock else None
         self._tf = transforms.TransformSender(self) if self.settings.publish_tf else None
         if self._tf is not None and self.info.mount is not None:
             self._tf.send_static(
@@ -74,9 +77,9 @@ class DriverNode(Node):
             stop.wait(0.05)
         self._origin_s = time.time()
 
-    def _on_detections(self, msg: object) -> None:
+    def _on_detections(self, msg: Any) -> None:
         if self._gate is not None:
-            self._gate.answered(msg.sequence)  # type: ignore[attr-defined]
+            self._gate.answered(msg.sequence)
 
     def _emit(self, event: Event, since_start_s: float) -> None:
         """One event of the source onto its topics; runs in the player's thread."""
@@ -106,8 +109,8 @@ class DriverNode(Node):
             self._tf.send(transforms.transform(sample.pose, stamp, odom, base))
 
     def _tick(self, time_s: float) -> None:
-        if self._clock is not None:
-            self._clock.publish(Clock(clock=conversion.stamp(time_s)))
+        if self._clock_publisher is not None:
+            self._clock_publisher.publish(Clock(clock=conversion.stamp(time_s)))
 
     def _status(self) -> Status:
         state = self.player.state

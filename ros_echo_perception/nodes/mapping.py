@@ -18,7 +18,7 @@ from .diagnostics import OK, STALE, WARN, Activity, Reporter, Status, steady_clo
 from .parameters import ParameterSet
 from .qos import create_publisher, create_subscription
 from .runtime import run
-from .settings import MappingNodeSettings
+from .settings import SECTIONS, MappingNodeSettings
 from .transforms import MountFromTf
 
 _WARN_PERIOD_S = 5.0
@@ -30,8 +30,7 @@ class MappingNode(Node):
 
     def __init__(self) -> None:
         super().__init__("mapping")
-        sections = {MappingNodeSettings: "", MappingConfig: ""}
-        self.parameters = ParameterSet(self, sections, self._on_change)
+        self.parameters = ParameterSet(self, SECTIONS["mapping"], self._on_change)
         settings = self.settings
         heads = settings.detection_topics
         # Mounts that TF has yet to tell are placeholders that no ping is mapped with.
@@ -86,7 +85,9 @@ class MappingNode(Node):
             self._drop("invalid message", error)
             return
         if not self._mount_is_known(topic, msg.header.frame_id):
-            self._drop("no mount", f"TF has no {msg.header.frame_id!r} in base_link yet")
+            self._drop(
+                "no mount", f"TF does not know where {msg.header.frame_id!r} is on the robot"
+            )
             return
         outcome = self.mapper.add_ping(topic, result)
         if outcome is MapOutcome.QUEUED:
@@ -153,7 +154,7 @@ class MappingNode(Node):
             "map revision": self.mapper.revision,
             "heads": ", ".join(self.settings.detection_topics),
         }
-        values |= {name: count for name, count in sorted(self.mapper.counts.items())}
+        values |= dict(sorted(self.mapper.counts.items()))
         return Status(*self._judge(), values)
 
     def _judge(self) -> tuple[bytes, str]:

@@ -1,4 +1,4 @@
-"""ROS parameters from settings dataclasses: declared, described, checked together, swapped whole."""
+"""ROS parameters from settings dataclasses: declared, described, checked and swapped as one."""
 
 from __future__ import annotations
 
@@ -18,6 +18,7 @@ from rclpy.parameter import Parameter
 
 from ..core.errors import SettingError
 from ..core.settings import SettingInfo, Settings, describe
+from .settings import FIXED
 
 SettingsT = TypeVar("SettingsT", bound=Settings)
 Sections = Mapping[type[Settings], str]
@@ -29,17 +30,17 @@ def parameter_name(prefix: str, info: SettingInfo) -> str:
     return f"{prefix}.{info.name}" if prefix else info.name
 
 
-def descriptor(info: SettingInfo) -> ParameterDescriptor:
+def descriptor(info: SettingInfo, fixed: bool = False) -> ParameterDescriptor:
     """What ROS tools show of a setting.
 
     Numbers and lists are typed dynamically, so that ``30`` in YAML serves where ``30.0`` is meant;
-    `ParameterSet` converts and checks them.
+    `ParameterSet` converts and checks them. ``fixed`` makes any setting read-only.
     """
     unit = f" [{info.unit}]" if info.unit else ""
     result = ParameterDescriptor(
         name=info.name,
         description=info.description + unit,
-        read_only=info.read_only,
+        read_only=info.read_only or fixed,
         dynamic_typing=info.kind in (float, list),
         additional_constraints="" if info.kind is bool else f"allowed: {info.allowed()}",
     )
@@ -80,13 +81,9 @@ class ParameterSet:
         self, node: Node, sections: Sections, on_change: Callable[[], None] | None = None
     ) -> None:
         self._node, self._sections, self._on_change = node, dict(sections), on_change
-        self._names = [
-            (parameter_name(prefix, info), info)
-            for cls, prefix in self._sections.items()
-            for info in describe(cls)
-        ]
-        for name, info in self._names:
-            self._declare(name, info)
+        for cls, prefix in self._sections.items():
+            for info in describe(cls):
+                self._declare(parameter_name(prefix, info), info, cls in FIXED)
         self._current = self._built({})
         node.add_on_set_parameters_callback(self._check)
         node.add_post_set_parameters_callback(self._apply)
@@ -97,10 +94,10 @@ class ParameterSet:
         assert isinstance(settings, cls)
         return settings
 
-    def _declare(self, name: str, info: SettingInfo) -> None:
+    def _declare(self, name: str, info: SettingInfo, fixed: bool) -> None:
         default = list(info.default) if info.kind is list else info.default
         try:
-            self._node.declare_parameter(name, default, descriptor(info))
+            self._node.declare_parameter(name, default, descriptor(info, fixed))
         except (InvalidParameterTypeException, InvalidParameterValueException) as error:
             raise SettingError(
                 f"parameter {name} cannot be used ({error}); allowed: {info.allowed()}."
@@ -123,7 +120,11 @@ class ParameterSet:
         return built
 
     def _ours(self, parameters: list[Parameter]) -> dict[str, Any]:
-        names = {name for name, _ in self._names}
+        names = {
+            parameter_name(prefix, info)
+            for cls, prefix in self._sections.items()
+            for info in describe(cls)
+        }
         return {item.name: item.value for item in parameters if item.name in names}
 
     def _check(self, parameters: list[Parameter]) -> SetParametersResult:

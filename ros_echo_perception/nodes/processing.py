@@ -18,7 +18,7 @@ from .diagnostics import ERROR, OK, STALE, WARN, Activity, Reporter, Status
 from .parameters import ParameterSet
 from .qos import create_publisher, create_subscription
 from .runtime import run
-from .settings import ProcessingNodeSettings
+from .settings import SECTIONS, ProcessingNodeSettings
 from .source import find_head_file
 
 _WARN_PERIOD_S = 5.0
@@ -30,8 +30,7 @@ class ProcessingNode(Node):
 
     def __init__(self) -> None:
         super().__init__("processing")
-        sections = {ProcessingNodeSettings: "", ProcessingConfig: "", ScanConfig: "scan"}
-        self.parameters = ParameterSet(self, sections, self._on_change)
+        self.parameters = ParameterSet(self, SECTIONS["processing"], self._on_change)
         self.settings = self.parameters.get(ProcessingNodeSettings)
         self.head = load_head(find_head_file(self.settings.head_file))
         self.pipeline = EchoPipeline(self.head, self.parameters.get(ProcessingConfig))
@@ -155,7 +154,7 @@ def judge(activity: Activity, flags: PingFlag) -> tuple[bytes, str]:
 
 def flag_names(flags: PingFlag) -> str:
     """Names of the flags that are set, or "none"."""
-    return ", ".join(flag.name.lower() for flag in PingFlag if flag and flag & flags) or "none"
+    return ", ".join(str(flag.name).lower() for flag in PingFlag if flag & flags) or "none"
 
 
 def main() -> None:

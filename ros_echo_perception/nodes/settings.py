@@ -6,8 +6,12 @@ import math
 from dataclasses import dataclass
 
 from ..core.errors import SettingError, refuse
+from ..core.mapping.config import MappingConfig
+from ..core.perception.config import ProcessingConfig
+from ..core.perception.scan import ScanConfig
 from ..core.settings import Settings, setting
 from ..core.types import Pose2
+from ..sources.simulator_config import SimulatorConfig
 
 
 @dataclass(frozen=True)
@@ -18,59 +22,38 @@ class DriverSettings(Settings):
         "simulator",
         "Where raw echoes come from",
         choices=("simulator", "recording"),
-        read_only=True,
     )
     head_file: str = setting(
-        "head_a.yaml",
+        "sparrow_52.yaml",
         "Head file: a path, or the name of a file in the package's config/heads",
-        read_only=True,
     )
-    world_file: str = setting(
-        "", "World for the simulator (YAML); empty: the room of the demo", read_only=True
-    )
-    recording: str = setting(
-        "", "Recording to play: a .wav with its .json beside it", read_only=True
-    )
-    rate_hz: float = setting(
-        25.0, "Pings per second of the simulator", "Hz", 0.5, 100.0, read_only=True
-    )
-    seed: int = setting(1, "Seed of the simulator's noise", "", 0, 2**31 - 1, read_only=True)
-    loop: bool = setting(
-        False, "Start again at the end of the source; stamps go on increasing", read_only=True
-    )
-    start_offset_s: float = setting(
-        0.0, "Begin this far into the source", "s", 0.0, 1e6, read_only=True
-    )
+    world_file: str = setting("", "World for the simulator (YAML); empty: the room of the demo")
+    recording: str = setting("", "Recording to play: a .wav with its .json beside it")
+    loop: bool = setting(False, "Start again at the end of the source; stamps go on increasing")
+    start_offset_s: float = setting(0.0, "Begin this far into the source", "s", 0.0, 1e6)
     pacing: str = setting(
         "real_time",
         "real_time: as the source's clock says; consumer: as fast as the processing node answers",
         choices=("real_time", "consumer"),
-        read_only=True,
     )
     real_time_factor: float = setting(
         1.0, "With pacing = real_time: seconds of the source per second", "", 0.01, 100.0,
-        read_only=True,
     )  # fmt: skip
     wait_for_consumer_s: float = setting(
         0.0,
         "Wait at most this long for a subscriber of raw_echo before the first ping",
-        "s", 0.0, 600.0, read_only=True,
+        "s", 0.0, 600.0,
     )  # fmt: skip
-    head_frame: str = setting("echo_head", "Frame of the head", read_only=True)
-    base_frame: str = setting("base_link", "Frame of the robot", read_only=True)
-    odom_frame: str = setting("odom", "Frame of the odometry", read_only=True)
+    head_frame: str = setting("echo_head", "Frame of the head")
+    base_frame: str = setting("base_link", "Frame of the robot")
+    odom_frame: str = setting("odom", "Frame of the odometry")
     publish_tf: bool = setting(
         True,
         "Publish odom to base and base to head as TF where the source knows them and tf2_msgs is "
         "installed",
-        read_only=True,
     )
-    publish_clock: bool = setting(
-        False, "Publish the stamps as /clock for nodes with use_sim_time", read_only=True
-    )
-    diagnostics_period_s: float = setting(
-        1.0, "Time between two diagnostics", "s", 0.1, 60.0, read_only=True
-    )
+    publish_clock: bool = setting(False, "Publish the stamps as /clock for nodes with use_sim_time")
+    diagnostics_period_s: float = setting(1.0, "Time between two diagnostics", "s", 0.1, 60.0)
 
     def check_together(self) -> None:
         """A recording needs a path."""
@@ -86,7 +69,7 @@ class ProcessingNodeSettings(Settings):
     """What the processing node needs beside the chain's own settings."""
 
     head_file: str = setting(
-        "head_a.yaml",
+        "sparrow_52.yaml",
         "Head file: a path, or the name of a file in the package's config/heads",
         read_only=True,
     )
@@ -104,7 +87,7 @@ class MappingNodeSettings(Settings):
         ("detections",), "Topics with the detections of the heads, one each", read_only=True
     )
     mount_x_m: tuple[float, ...] = setting(
-        (0.2,), "Forward position of each head in base_link", "m", -10.0, 10.0, read_only=True
+        (0.12,), "Forward position of each head in base_link", "m", -10.0, 10.0, read_only=True
     )
     mount_y_m: tuple[float, ...] = setting(
         (0.0,), "Position of each head to the left", "m", -10.0, 10.0, read_only=True
@@ -157,3 +140,14 @@ class MappingNodeSettings(Settings):
             topic: Pose2(float(x), float(y), float(yaw))
             for topic, (x, y, yaw) in zip(self.detection_topics, poses, strict=False)
         }
+
+
+SECTIONS: dict[str, dict[type[Settings], str]] = {
+    "driver": {DriverSettings: "", SimulatorConfig: "simulator"},
+    "processing": {ProcessingNodeSettings: "", ProcessingConfig: "", ScanConfig: "scan"},
+    "mapping": {MappingNodeSettings: "", MappingConfig: ""},
+}
+"""All parameters of every node: settings classes and the prefix of their parameters' names."""
+
+FIXED: tuple[type[Settings], ...] = (DriverSettings, SimulatorConfig)
+"""Settings that are only read when the node starts: all their parameters are read-only."""

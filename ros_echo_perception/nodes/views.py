@@ -35,7 +35,7 @@ POINT = np.dtype(
         ("flags", np.uint32),
     ]
 )
-"""One point of the cloud, SI units; intensity is the SNR in dB, ears and flags as in the messages."""
+"""One point of the cloud, SI units; intensity is SNR in dB, ears and flags as in the messages."""
 
 _DATATYPE = {np.dtype(np.float32): PointField.FLOAT32, np.dtype(np.uint32): PointField.UINT32}
 
@@ -74,10 +74,8 @@ def points_to_msg(result: PingResult, header: Any) -> PointCloud2:
         point["bearing_min"], point["bearing_max"] = echo.bearing_min_rad, echo.bearing_max_rad
         point["ears"], point["flags"] = int(echo.ears), int(echo.flags)
     fields = [
-        PointField(
-            name=name, offset=POINT.fields[name][1], datatype=_DATATYPE[POINT[name]], count=1
-        )
-        for name in POINT.names
+        PointField(name=name, offset=offset, datatype=_DATATYPE[kind], count=1)
+        for name, (kind, offset) in (POINT.fields or {}).items()
     ]
     return PointCloud2(
         header=header,
