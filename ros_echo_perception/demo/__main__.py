@@ -67,7 +67,6 @@ def _run(
 ) -> None:
     # ROS is loaded here, after the environment is set and after --help is answered.
     from . import session
-    from .report import finish
 
     console = Console(highlight=False)
     plan = session.Plan(seconds, out, head, world, rate_hz, seed)
@@ -79,6 +78,8 @@ def _run(
     shipped("config")
     _make_room(out)
     outcome = session.run(plan, console, started_s)
+    from .report import finish  # plots and statistics: not before the nodes have run
+
     finish(plan, outcome, console)
 
 

@@ -23,18 +23,28 @@ _SURFACE_STEP_M = 0.02
 
 @dataclass(frozen=True)
 class TrueEcho:
-    """A true reflector of one ping; ``snr_db`` is that of the better ear."""
+    """A true reflector of one ping; ``snr_db`` is that of the better ear.
+
+    ``findable`` is false where nobody could be expected to find it, masked ones for instance.
+    """
 
     range_m: float
     bearing_rad: float
     snr_db: float
+    findable: bool = True
+
+    @property
+    def must_be_found(self) -> bool:
+        """Whether missing it is a fault."""
+        return self.findable and self.snr_db >= MUST_FIND_FROM_DB
 
 
 @dataclass(frozen=True)
 class DetectionScore:
     """Detections against true echoes.
 
-    ``must_find`` counts true echoes of 15 dB and more; errors are those of the matched pairs.
+    ``must_find`` counts findable true echoes of 15 dB and more, ``found`` those of them that were
+    found; ``n_matched`` counts detections that are any true echo; errors are those of the matched pairs.
     """
 
     n_detections: int
@@ -56,8 +66,8 @@ def score_detections(
         pairs = match(detections, truth)
         n_detections += len(detections)
         n_matched += len(pairs)
-        must_find += sum(t.snr_db >= MUST_FIND_FROM_DB for t in truth)
-        found += sum(truth[j].snr_db >= MUST_FIND_FROM_DB for _, j in pairs)
+        must_find += sum(t.must_be_found for t in truth)
+        found += sum(truth[j].must_be_found for _, j in pairs)
         range_errors += [detections[i].range_m - truth[j].range_m for i, j in pairs]
         bearing_errors += [
             wrap_angle(detections[i].bearing_rad - truth[j].bearing_rad) for i, j in pairs

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from dataclasses import replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -41,16 +40,12 @@ def finish(plan: Plan, outcome: Outcome, console: Console) -> list[summary.Figur
 
 
 def score(truth: TrueDrive, pings: list[SeenPing]) -> DetectionScore | None:
-    """Detections against all true echoes; what must be found leaves out what nobody can find."""
+    """Detections against all true echoes; None without any ping."""
     if not pings:
         return None
-    everything = comparison.score_detections(
+    return comparison.score_detections(
         (ping.detections, truth.echoes(ping.sequence)) for ping in pings
     )
-    findable = comparison.score_detections(
-        (ping.detections, truth.must_find(ping.sequence)) for ping in pings
-    )
-    return replace(everything, must_find=findable.must_find, found=findable.found)
 
 
 def _outline(

@@ -81,7 +81,7 @@ def _truth(score: DetectionScore) -> list[Figure]:
     return [
         Figure("precision", "detections that are true echoes",
                _share(score.n_matched, score.n_detections), "%"),
-        Figure("recall", "true echoes of 15 dB or more found",
+        Figure("recall", "findable echoes of 15 dB or more found",
                _share(score.found, score.must_find), "%"),
         Figure("range_error_median_mm", "range error, median",
                1e3 * _at(np.abs(score.range_errors_m), 0.5), "mm"),

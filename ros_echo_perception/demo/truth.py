@@ -22,7 +22,6 @@ from .monitor import Monitor, SeenPing
 from .session import Plan
 
 _CIRCLE_POINTS = 33
-_TRUE_FROM_DB = 0.0
 
 
 class TrueDrive:
@@ -39,17 +38,8 @@ class TrueDrive:
     def echoes(self, sequence: int) -> list[TrueEcho]:
         """All true echoes of a ping, also those that nobody could be expected to find."""
         return [
-            TrueEcho(r.range_m, r.bearing_rad, max(r.snr_db))
+            TrueEcho(r.range_m, r.bearing_rad, max(r.snr_db), not r.not_scored_because)
             for r in self._simulator.truth(sequence).reflectors
-            if max(r.snr_db) >= _TRUE_FROM_DB
-        ]
-
-    def must_find(self, sequence: int) -> list[TrueEcho]:
-        """Those of `echoes` that a good algorithm should find."""
-        return [
-            TrueEcho(r.range_m, r.bearing_rad, max(r.snr_db))
-            for r in self._simulator.truth(sequence).reflectors
-            if not r.not_scored_because
         ]
 
     def world_in_odometry(self, pings: Sequence[SeenPing], poses: PoseBuffer) -> Pose2:
