@@ -1,4 +1,4 @@
-"""Which objects explain a ping: added, refined, re-searched and dropped by likelihood."""
+"""Which objects explain a ping: added, refined, split, re-searched, dropped by likelihood."""
 
 from __future__ import annotations
 
@@ -11,24 +11,20 @@ from scipy.optimize import brentq
 from ..types import ComplexArray, FloatArray
 from .conditioning import Conditioned
 from .config import ProcessingConfig
-from .joint import (
-    Objects,
-    Priors,
-    Refined,
-    no_objects,
-    one_object,
-    refine,
-    remove,
-    window_of,
-)
+from .joint import Objects, Priors, Refined, no_objects, one_object, refine, signals, window_of
 from .model import HeadModel
 from .pairing import Candidate
 from .search import bearing_grid, matched_filter, scan
+from .split import best_pairs
 
 _SEED_HALF_WIDTH_M = 0.03
 _RESEARCH_HALF_WIDTH_M = 0.012
 _SWITCH_NATS = 1.0
 _EXTRA_ROUNDS = 12
+_MISFIT_SIGMAS = 3.0
+_MAX_SPLITS = 3
+_SURE_FACTOR = 6.0
+"""An object whose linearised loss is this many thresholds needs no refit without it."""
 
 
 def gain_threshold(model: HeadModel, ping: Conditioned, false_detections_per_ping: float) -> float:
@@ -59,6 +55,8 @@ class Explained:
         shape (k,): nats that the ping's likelihood loses without the object.
     covariance
         shape (k, 3, 3) of (range, bearing, velocity) at the fitted place.
+    sounds
+        What each object puts into the ears, complex (2, window).
     residual
         complex, shape (2, n): samples less all objects.
     """
@@ -66,12 +64,20 @@ class Explained:
     objects: Objects
     gain: FloatArray
     covariance: FloatArray
+    windows: list[slice]
+    sounds: list[ComplexArray]
     residual: ComplexArray
     threshold: float
 
+    def alone(self, i: int) -> ComplexArray:
+        """Samples (2, n) with all objects but one taken off."""
+        samples = self.residual.copy()
+        samples[:, self.windows[i]] += self.sounds[i]
+        return samples
+
 
 class ObjectFitter:
-    """Fits the objects of one ping."""
+    """Fits the objects of one ping; use once."""
 
     def __init__(self, model: HeadModel, ping: Conditioned, config: ProcessingConfig) -> None:
         self.model = model
@@ -81,6 +87,8 @@ class ObjectFitter:
         self.bearings = bearing_grid(model, config.max_bearing_rad)
         self.priors = Priors(config.velocity_sigma_m_s, config.max_bearing_rad)
         self.objects = no_objects()
+        self.windows: list[slice] = []
+        self.sounds: list[ComplexArray] = []
         self.residual = ping.samples.copy()
 
     def fit(self, candidates: list[Candidate]) -> Explained:
@@ -89,9 +97,12 @@ class ObjectFitter:
             if len(self.objects) >= self.config.max_echoes:
                 break
             self._try_add(candidate.mean_delay_s)
+        self._split_misfits()
         self._add_from_residual()
         self._search_again()
         return self._drop_weak()
+
+    # ------------------------------------------------------------------ steps of fit()
 
     def _try_add(self, delay_s: float) -> bool:
         range_m = self.model.range_of_delay(delay_s)
@@ -102,8 +113,8 @@ class ObjectFitter:
         best_range, best_bearing, strength, gain = found.best()
         if gain < self.threshold:
             return False
-        self.objects = self.objects.join(one_object(best_range, best_bearing, strength))
-        self._refine_around(len(self.objects) - 1)
+        self._append(one_object(best_range, best_bearing, strength))
+        self._replace(self._cluster(len(self.objects) - 1))
         return True
 
     def _add_from_residual(self) -> None:
@@ -116,20 +127,34 @@ class ObjectFitter:
             for delay in tried:
                 energy[np.abs(self.ping.time_s - delay) < 1.5 * self.ping.step_s] = 0.0
             peak = int(np.argmax(energy))
-            if energy[peak] < 0.8 * self.threshold:
+            if energy[peak] < self.threshold:
                 return
             tried.append(float(self.ping.time_s[peak]))
             self._try_add(tried[-1])
 
+    def _split_misfits(self) -> None:
+        """Where objects leave too much behind, see whether a pair explains it better.
+
+        Two objects at one range pose as one between them, a maximum of the likelihood for one
+        object from which no small step leads away.
+        """
+        for _ in range(_MAX_SPLITS):
+            misfit = [self._misfit(i) for i in range(len(self.objects))]
+            if not misfit or max(misfit) < _MISFIT_SIGMAS:
+                return
+            if not self._try_split(int(np.argmax(misfit))):
+                return
+
     def _search_again(self) -> None:
         """Look at each object alone, all others taken off: another lobe may fit better."""
         for i in range(len(self.objects)):
+            if len(self._cluster(i)) == 1:
+                continue
             one = self.objects.take([i])
-            alone = self._alone(i)
             found = scan(
                 self.model,
                 self.ping,
-                alone,
+                self._alone([i]),
                 float(one.range_m[0]),
                 _RESEARCH_HALF_WIDTH_M,
                 self.bearings,
@@ -138,97 +163,162 @@ class ObjectFitter:
             here = int(np.argmin(np.abs(self.bearings - one.bearing_rad[0])))
             near = slice(max(here - 2, 0), here + 3)
             if gain > float(found.gain[:, near].max()) + _SWITCH_NATS:
-                before = self.objects, self.residual
-                cost = self._cost_around(i)
-                others = self.objects.take([j for j in range(len(self.objects)) if j != i])
-                self.objects = others.join(one_object(best_range, best_bearing, strength))
-                self._refine_around(len(self.objects) - 1)
-                if self._cost_around(len(self.objects) - 1) > cost:
-                    self.objects, self.residual = before
+                self._try_instead([i], one_object(best_range, best_bearing, strength), 0.0)
 
-    def _alone(self, i: int) -> ComplexArray:
-        others = [j for j in range(len(self.objects)) if j != i]
-        return remove(self.model, self.ping, self.objects.take(others), self.ping.samples)
+    def _drop_weak(self) -> Explained:
+        """Drop what the likelihood does not miss, weakest first; measure what stays."""
+        gains: dict[float, float] = {}
+        covariances: dict[float, FloatArray] = {}
+        pending = [float(r) for r in self.objects.range_m]
+        while pending:
+            # Objects change places in the list as clusters are refined: go by their range.
+            i = int(np.argmin(np.abs(self.objects.range_m - pending[0])))
+            members = self._cluster(i)
+            refined = self._settle(members)
+            known = {float(r) for r in self.objects.range_m}
+            for k, r in enumerate(refined.objects.range_m.tolist()):
+                gains[r] = float(refined.gain[k])
+                covariances[r] = refined.covariance[k]
+            pending = [r for r in known if r not in gains]
+        order = [float(r) for r in self.objects.range_m]
+        return Explained(
+            objects=self.objects,
+            gain=np.array([gains[r] for r in order]),
+            covariance=np.array([covariances[r] for r in order]).reshape(-1, 3, 3),
+            windows=self.windows,
+            sounds=self.sounds,
+            residual=self.residual,
+            threshold=self.threshold,
+        )
 
-    def _cost_around(self, i: int) -> float:
-        window = window_of(self.model, self.ping, self.objects.take([i]))
-        left = self.residual[:, window] * self.ping.weight[:, window]
-        return float(np.vdot(left, left).real)
+    # ------------------------------------------------------------------------- helpers
+
+    def _settle(self, members: list[int]) -> Measured:
+        """Refine a cluster, dropping its weakest object as long as that costs too little."""
+        while True:
+            samples = self._alone(members)
+            cluster = self.objects.take(members)
+            refined = self._refined(cluster, samples)
+            gain = self._gains(refined, samples)
+            weakest = int(np.argmin(gain))
+            if gain[weakest] >= self.threshold:
+                self._replace_with(members, refined.objects)
+                return Measured(refined.objects, gain, refined.covariance)
+            keep = [i for i in range(len(cluster)) if i != weakest]
+            first_new = len(self.objects) - len(members)
+            self._replace_with(members, refined.objects.take(keep))
+            members = list(range(first_new, len(self.objects)))
+            if not members:
+                return Measured(no_objects(), np.zeros(0), np.zeros((0, 3, 3)))
+
+    def _gains(self, refined: Refined, samples: ComplexArray) -> FloatArray:
+        """What the likelihood loses without each object, the others refitted."""
+        objects = refined.objects
+        window = window_of(self.model, self.ping, objects)
+        gain = refined.strength_loss.copy()
+        for i in np.nonzero(gain < _SURE_FACTOR * self.threshold)[0].tolist():
+            others = objects.take([j for j in range(len(objects)) if j != i])
+            cost = self._cost(others, samples, window)
+            gain[i] = cost - refined.cost
+        return gain
+
+    def _cost(self, objects: Objects, samples: ComplexArray, window: slice) -> float:
+        if len(objects):
+            return refine(self.model, self.ping, samples, window, objects, self.priors).cost
+        sound = samples[:, window] * self.ping.weight[:, window]
+        return float(np.vdot(sound, sound).real)
+
+    def _misfit(self, i: int) -> float:
+        """Excess of the residual around an object, in standard deviations of noise."""
+        window = self.windows[i]
+        weight = self.ping.weight[:, window]
+        left = self.residual[:, window] * weight
+        count = int(np.count_nonzero(weight))
+        excess = float(np.vdot(left, left).real) - count
+        return excess / math.sqrt(max(count, 1))
+
+    def _try_split(self, i: int) -> bool:
+        near = self.model.speed_m_s * self.model.pulses[0].envelope_sigma_s
+        distance = np.abs(self.objects.range_m - self.objects.range_m[i])
+        members = [int(j) for j in np.argsort(distance)[:2] if distance[j] < near]
+        samples = self._alone(members)
+        extra = self.threshold if len(members) == 1 else 0.0
+        centre = float(np.mean(self.objects.range_m[members]))
+        window = window_of(self.model, self.ping, self.objects.take(members))
+        now = self._cost(self.objects.take(members), samples, window)
+        best: Refined | None = None
+        for pair in best_pairs(self.model, self.ping, samples, centre, self.config):
+            refined = refine(self.model, self.ping, samples, window, pair, self.priors)
+            if best is None or refined.cost < best.cost:
+                best = refined
+        if best is None or best.cost > now - extra - _SWITCH_NATS:
+            return False
+        self._replace_with(members, best.objects)
+        return True
+
+    def _try_instead(self, members: list[int], others: Objects, extra: float) -> None:
+        """Put other objects in the place of some, if the refined likelihood gains by it."""
+        samples = self._alone(members)
+        both = self.objects.take(members).join(others)
+        window = window_of(self.model, self.ping, both)
+        before = self._cost(self.objects.take(members), samples, window)
+        after = refine(self.model, self.ping, samples, window, others, self.priors)
+        if after.cost < before - extra:
+            self._replace_with(members, after.objects)
 
     def _cluster(self, i: int) -> list[int]:
         """Objects whose sound overlaps that of object i, in chains, i included."""
-        windows = [
-            window_of(self.model, self.ping, self.objects.take([j]))
-            for j in range(len(self.objects))
-        ]
-        low, high = windows[i].start, windows[i].stop
-        members = {i}
+        members, low, high = {i}, self.windows[i].start, self.windows[i].stop
         while True:
             more = {
                 j
-                for j, w in enumerate(windows)
+                for j, w in enumerate(self.windows)
                 if j not in members and w.start < high and w.stop > low
             }
             if not more:
                 return sorted(members)
             members |= more
-            low = min(windows[j].start for j in members)
-            high = max(windows[j].stop for j in members)
+            low = min(self.windows[j].start for j in members)
+            high = max(self.windows[j].stop for j in members)
 
-    def _refine_around(self, i: int) -> None:
-        members = self._cluster(i)
-        refined = self._refined(members)
-        rest = [j for j in range(len(self.objects)) if j not in members]
-        # Members move to the end: the last object stays the last.
-        self.objects = self.objects.take(rest).join(refined.objects)
-        self.residual = remove(self.model, self.ping, self.objects, self.ping.samples)
-
-    def _refined(self, members: list[int]) -> Refined:
-        cluster = self.objects.take(members)
+    def _refined(self, cluster: Objects, samples: ComplexArray) -> Refined:
         window = window_of(self.model, self.ping, cluster)
-        return refine(self.model, self.ping, window, cluster, self.priors)
+        return refine(self.model, self.ping, samples, window, cluster, self.priors)
 
-    def _drop_weak(self) -> Explained:
-        """Drop what the likelihood does not miss, weakest first; measure what stays."""
-        done: list[tuple[Objects, FloatArray, FloatArray]] = []
-        left = list(range(len(self.objects)))
-        while left:
-            members = [j for j in self._cluster(left[0]) if j in left]
-            done.append(self._measured(members))
-            left = [j for j in left if j not in members]
-        objects, gains, covariances = no_objects(), [], []
-        for part, gain, covariance in done:
-            objects = objects.join(part)
-            gains.append(gain)
-            covariances.append(covariance)
-        residual = remove(self.model, self.ping, objects, self.ping.samples)
-        return Explained(
-            objects,
-            np.concatenate(gains) if gains else np.zeros(0),
-            np.concatenate(covariances) if covariances else np.zeros((0, 3, 3)),
-            residual,
-            self.threshold,
-        )
+    def _replace(self, members: list[int]) -> None:
+        refined = self._refined(self.objects.take(members), self._alone(members))
+        self._replace_with(members, refined.objects)
 
-    def _measured(self, members: list[int]) -> tuple[Objects, FloatArray, FloatArray]:
-        cluster = self.objects.take(members)
-        while True:
-            if len(cluster) == 0:
-                return cluster, np.zeros(0), np.zeros((0, 3, 3))
-            window = window_of(self.model, self.ping, cluster)
-            full = refine(self.model, self.ping, window, cluster, self.priors)
-            cluster = full.objects
-            gain = np.array(
-                [self._cost_without(cluster, i, window) - full.cost for i in range(len(cluster))]
-            )
-            weakest = int(np.argmin(gain))
-            if gain[weakest] >= self.threshold:
-                return cluster, gain, full.covariance
-            cluster = cluster.take([i for i in range(len(cluster)) if i != weakest])
+    def _replace_with(self, members: list[int], objects: Objects) -> None:
+        """Take the members off the list and put other objects at its end."""
+        self.residual = self._alone(members)
+        rest = [j for j in range(len(self.objects)) if j not in members]
+        self.objects = self.objects.take(rest)
+        self.windows = [self.windows[j] for j in rest]
+        self.sounds = [self.sounds[j] for j in rest]
+        for k in range(len(objects)):
+            self._append(objects.take([k]))
 
-    def _cost_without(self, cluster: Objects, i: int, window: slice) -> float:
-        others = cluster.take([j for j in range(len(cluster)) if j != i])
-        if len(others) == 0:
-            sound = self.ping.samples[:, window] * self.ping.weight[:, window]
-            return float(np.vdot(sound, sound).real)
-        return refine(self.model, self.ping, window, others, self.priors).cost
+    def _append(self, one: Objects) -> None:
+        window = window_of(self.model, self.ping, one)
+        rendered = signals(self.model, one, self.ping.time_s[window]).value[:, 0, :]
+        sound = one.strength[0] * rendered
+        self.objects = self.objects.join(one)
+        self.windows.append(window)
+        self.sounds.append(sound)
+        self.residual[:, window] -= sound
+
+    def _alone(self, members: list[int]) -> ComplexArray:
+        samples = self.residual.copy()
+        for i in members:
+            samples[:, self.windows[i]] += self.sounds[i]
+        return samples
+
+
+@dataclass(frozen=True, eq=False)
+class Measured:
+    """Objects of a cluster with gains (k,) and covariances (k, 3, 3)."""
+
+    objects: Objects
+    gain: FloatArray
+    covariance: FloatArray

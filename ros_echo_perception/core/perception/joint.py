@@ -24,7 +24,7 @@ from .conditioning import Conditioned
 from .model import HeadModel
 
 _ROUNDS = 12
-_TOLERANCE = 1e-3  # of the cost, nats
+_TOLERANCE = 1e-2  # of the cost, nats
 
 
 @dataclass(frozen=True, eq=False)
@@ -86,24 +86,32 @@ def signals(model: HeadModel, objects: Objects, time_s: FloatArray) -> Signals:
     geometry = model.geometry(objects.range_m, objects.bearing_rad)
     factor = (geometry.gain * model.carrier(geometry))[:, :, None]
     lag = time_s - geometry.delay_s[:, :, None]  # (2, k, n)
-    parts = [pulse.evaluate(lag[ear]) for ear, pulse in enumerate(model.pulses)]
-    pulse = np.stack([p[0] for p in parts])
-    slope = np.stack([p[1] for p in parts])
-    tilted = pulse + geometry.tilt_s[:, :, None] / (2j * math.pi) * slope
-    shift = model.doppler_rad_s_per_m_s
-    omega_d = shift * objects.velocity_m_s[:, None]
+    pulse, slope = np.empty(lag.shape, complex), np.empty(lag.shape, complex)
+    for ear, template in enumerate(model.pulses):
+        pulse[ear], slope[ear] = template.evaluate(lag[ear])
+    # Velocity turns the phase about the pulse's peak, so that it is not confounded with phase.
+    turning_s = lag - model.pulses[0].peak_time_s
+    omega_d = model.doppler_rad_s_per_m_s * objects.velocity_m_s[:, None]
     if np.any(objects.velocity_m_s):
-        factor = factor * np.exp(1j * omega_d * lag)
-    value = factor * tilted
-    by_delay = -factor * slope - 1j * (model.omega + omega_d) * value
+        factor = factor * np.exp(1j * omega_d * turning_s)
+    value = factor * (pulse + geometry.tilt_s[:, :, None] / (2j * math.pi) * slope)
+    moved = -factor * slope - 1j * omega_d * value
+    phase = -1j * model.omega * value
+    by_range, by_bearing = geometry.delay_per_m, geometry.delay_per_rad
     relative_gain = geometry.gain_per_rad / np.maximum(geometry.gain, 1e-9)
     return Signals(
         value=value,
-        by_range=by_delay * geometry.delay_per_m[:, :, None],
-        by_bearing=by_delay * geometry.delay_per_rad[:, :, None]
-        + relative_gain[:, :, None] * value,
-        by_velocity=1j * shift * lag * value,
+        by_range=moved * by_range[:, :, None] + phase * _relative(by_range),
+        by_bearing=moved * by_bearing[:, :, None]
+        + phase * _relative(by_bearing)
+        + value * relative_gain[:, :, None],
+        by_velocity=1j * model.doppler_rad_s_per_m_s * turning_s * value,
     )
+
+
+def _relative(slope: FloatArray) -> FloatArray:
+    """Of each ear against the mean of both, ready to multiply (2, k, n)."""
+    return np.asarray((slope - slope.mean(axis=0))[:, :, None])
 
 
 @dataclass(frozen=True, eq=False)
@@ -116,11 +124,14 @@ class Refined:
         Weighted sum of squared residuals, in nats (twice the usual chi-square's half).
     covariance
         shape (k, 3, 3): of (range, bearing, velocity) of each object.
+    strength_loss
+        shape (k,): linearised loss of likelihood without each object, nats.
     """
 
     objects: Objects
     cost: float
     covariance: FloatArray
+    strength_loss: FloatArray
 
 
 @dataclass(frozen=True)
@@ -132,12 +143,22 @@ class Priors:
 
 
 def refine(
-    model: HeadModel, ping: Conditioned, window: slice, objects: Objects, priors: Priors
+    model: HeadModel,
+    ping: Conditioned,
+    samples: ComplexArray,
+    window: slice,
+    objects: Objects,
+    priors: Priors,
 ) -> Refined:
-    """Fit the objects' parameters to the samples in the window by damped least squares [2]_."""
+    """Fit the objects' parameters to samples in a window by damped least squares [2]_.
+
+    Parameters
+    ----------
+    samples : complex (2, n), what the objects are to explain (others taken off).
+    """
     time = ping.time_s[window]
     weight = ping.weight[:, window]
-    target = (ping.samples[:, window] * weight).ravel()
+    target = (samples[:, window] * weight).ravel()
     damping = 1e-3
     rendered = signals(model, objects, time)
     objects = _with_best_strengths(objects, rendered, weight, target)
@@ -164,7 +185,7 @@ def refine(
         damping = max(damping / 8.0, 1e-7)
         if gained < _TOLERANCE:
             break
-    return Refined(objects, cost, _covariances(normal, len(objects)))
+    return _measured(objects, cost, normal)
 
 
 def _with_best_strengths(
@@ -231,24 +252,19 @@ def _moved(objects: Objects, step: FloatArray, priors: Priors) -> Objects:
     )
 
 
-def _covariances(normal: FloatArray, k: int) -> FloatArray:
-    # The cost is |residual|^2 of complex noise of variance 1: its Hessian is 2 * normal, so
-    # the covariance is the inverse of that; 1/2 per real part.
+def _measured(objects: Objects, cost: float, normal: FloatArray) -> Refined:
+    # The cost is |residual|^2 of complex noise of variance 1, its Hessian 2 * normal.
     inverse = 0.5 * np.linalg.pinv(normal, hermitian=True)
-    return np.stack([inverse[5 * i : 5 * i + 3, 5 * i : 5 * i + 3] for i in range(k)])
-
-
-def remove(
-    model: HeadModel, ping: Conditioned, objects: Objects, samples: ComplexArray
-) -> ComplexArray:
-    """Samples (2, n) with the sound of the objects taken off."""
-    left = samples.copy()
-    for i in range(len(objects)):
-        one = objects.take([i])
-        window = window_of(model, ping, one)
-        rendered = signals(model, one, ping.time_s[window])
-        left[:, window] -= objects.strength[i] * rendered.value[:, 0, :]
-    return left
+    k = len(objects)
+    covariance = np.empty((k, 3, 3))
+    loss = np.empty(k)
+    for i in range(k):
+        block = inverse[5 * i : 5 * i + 5, 5 * i : 5 * i + 5]
+        covariance[i] = block[:3, :3]
+        strength = np.array([objects.strength[i].real, objects.strength[i].imag])
+        # Setting the strength to 0, all else free to follow: half the Wald statistic.
+        loss[i] = 0.5 * strength @ np.linalg.pinv(block[3:, 3:], hermitian=True) @ strength
+    return Refined(objects, cost, covariance, loss)
 
 
 def window_of(model: HeadModel, ping: Conditioned, objects: Objects) -> slice:

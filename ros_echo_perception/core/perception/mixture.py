@@ -20,9 +20,10 @@ import numpy as np
 
 from ..types import FloatArray
 
-_TOLERANCE = 1e-6
+_TOLERANCE = 1e-5
 _MAX_ROUNDS = 300
 _BACKGROUND = 1e-3
+_LEAST_EXCESS = 2.5
 
 
 @dataclass(frozen=True)
@@ -75,7 +76,7 @@ def fit_mixture(
 
     Notes
     -----
-    Ends when a round raises the mean log likelihood by less than 1e-6.
+    Ends when a round raises the mean log likelihood by less than 1e-5.
 
     Examples
     --------
@@ -138,7 +139,8 @@ def fit_mixture_of_unknown_order(
     Notes
     -----
     chi2 + 2 k ln(2 B T): each component has a time and a height. A further one starts where
-    the envelope exceeds the fit most; the search ends when it does not pay.
+    the envelope exceeds the fit most; the search ends when it does not pay or nothing
+    stands out of the noise.
     """
     weight = np.maximum(envelope - noise_sigma, 0.0)
     independent = max(2.0, envelope.size * independent_fraction)
@@ -147,6 +149,8 @@ def fit_mixture_of_unknown_order(
     best_score = _score(best, time_s, weight, noise_sigma, independent)
     while best.time_s.size < max_components:
         excess = weight - best.evaluate(time_s)
+        if float(excess.max()) < _LEAST_EXCESS * noise_sigma:
+            break
         starts = np.append(best.time_s, time_s[int(np.argmax(excess))])
         candidate = fit_mixture(time_s, weight, starts, sigma_bounds_s)
         score = _score(candidate, time_s, weight, noise_sigma, independent)

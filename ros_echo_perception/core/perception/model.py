@@ -85,9 +85,14 @@ class HeadModel:
         )
 
     def carrier(self, geometry: EarGeometry) -> ComplexArray:
-        """Phase factors of both ears, exp(-j w delay) with the ears' phase mismatch."""
+        """Phase factors of both ears, exp(-j w (delay - mean delay)) with their mismatch.
+
+        The common phase belongs to the object's strength: so a small step in range is not
+        confounded with many turns of the carrier.
+        """
         mismatch = self._ear_phase.reshape(2, *(1,) * (geometry.delay_s.ndim - 1))
-        return np.asarray(np.exp(1j * (mismatch - self.omega * geometry.delay_s)))
+        relative = geometry.delay_s - geometry.delay_s.mean(axis=0)
+        return np.asarray(np.exp(1j * (mismatch - self.omega * relative)))
 
     def range_of_delay(self, delay_s: float, bearing_rad: float = 0.0) -> float:
         """Range at which the mean delay of both ears is ``delay_s`` (far-field start, Newton)."""

@@ -12,7 +12,6 @@ from .bearing import BearingPosterior, bearing_posterior
 from .conditioning import Conditioned
 from .config import ProcessingConfig
 from .fit import Explained
-from .joint import remove, window_of
 from .model import HeadModel
 from .search import bearing_grid, scan
 
@@ -50,14 +49,12 @@ def _detection(
     objects = explained.objects
     one = objects.take([i])
     range_m, bearing_rad = float(one.range_m[0]), float(one.bearing_rad[0])
-    others = objects.take([j for j in range(len(objects)) if j != i])
-    alone = remove(model, ping, others, ping.samples)
-    found = scan(model, ping, alone, range_m, _POSTERIOR_HALF_WIDTH_M, bearings)
+    found = scan(model, ping, explained.alone(i), range_m, _POSTERIOR_HALF_WIDTH_M, bearings)
     covariance = explained.covariance[i]
     fitted_sigma = math.sqrt(max(float(covariance[1, 1]), 1e-12))
     posterior = bearing_posterior(found, bearing_rad, fitted_sigma)
     amplitude, snr_db = _per_ear(model, ping, explained, i)
-    window = window_of(model, ping, one)
+    window = explained.windows[i]
     flags = _flags(ping, window, posterior)
     velocity_sigma = math.sqrt(float(covariance[2, 2]))
     informative = velocity_sigma < 0.7 * config.velocity_sigma_m_s

@@ -108,11 +108,9 @@ def scan(
         match += geometry.gain[ear] * phase[ear] * b
         energy += geometry.gain[ear] ** 2 * e
     safe = np.maximum(energy, 1e-30)
-    # The range shift turns the carrier of both ears alike: it only turns the strength.
-    turn = np.exp(1j * model.omega * shift_s)[:, None]
     prior = np.log(np.maximum(geometry.gain.max(axis=0), 1e-3))
     gain = np.abs(match) ** 2 / safe + prior
-    return Scan(range_m + offset_m, bearing_rad, gain, match * turn / safe)
+    return Scan(range_m + offset_m, bearing_rad, gain, match / safe)
 
 
 def _correlate(
