@@ -1,0 +1,356 @@
+"""The local mapper as a whole: evidence from several places, phantoms, motion, invariance."""
+
+import copy
+import math
+
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from mapping_helpers import (
+    AMBIGUOUS,
+    SOUND_M_S,
+    detection,
+    highest,
+    look,
+    mapper,
+    odometry,
+    one_sided,
+    ping,
+    seen_from,
+    value,
+)
+
+from ros_echo_perception.core.mapping import LocalMapper, MapOutcome, MappingConfig, run_mapper
+from ros_echo_perception.core.types import OdometrySample, PingFlag, Pose2
+
+POLES = [(1.5, 0.4), (2.0, -0.6), (3.0, 0.1), (2.5, 1.5)]
+LASTING = {"occupied_decay_s": 0.0, "free_decay_s": 0.0}
+
+
+def along_x(time_s):
+    """Half a metre a second, slowly turning."""
+    return Pose2(0.5 * time_s, 0.0, 0.1 * time_s)
+
+
+def every(n, step_s=0.1, start_s=0.1):
+    return [start_s + step_s * k for k in range(n)]
+
+
+def drive_past(points=POLES, n=15, sigma_rad=0.01, pose_at=along_x, **values):
+    found = look(
+        mapper(**(LASTING | values)), every(n), lambda p: seen_from(p, points, sigma_rad), pose_at
+    )
+    return found
+
+
+# ---------------------------------------------------------------------- what is found
+def test_poles_become_occupied_where_they_are_and_nowhere_else():
+    found = drive_past()
+    rows, columns = np.nonzero(found.data >= 65)
+    x = found.origin_x_m + (columns + 0.5) * found.resolution_m
+    y = found.origin_y_m + (rows + 0.5) * found.resolution_m
+    distance = np.min([np.hypot(x - px, y - py) for px, py in POLES], axis=0)
+    assert distance.max() < 0.15
+    for pole in POLES:
+        assert highest(found, *pole) >= 65
+
+
+def test_cells_on_the_way_to_an_echo_are_free_and_the_rest_is_unknown():
+    found = look(mapper(), every(20), lambda _: [detection(2.0, 0.0)])
+    assert value(found, 1.0, 0.01) < 35
+    assert value(found, 1.0, 0.5) == -1
+    assert value(found, 2.5, 0.01) == -1
+
+
+def test_cells_nearer_than_the_nearest_measurable_range_are_kept():
+    found = look(mapper(), every(20), lambda _: [detection(2.0, 0.0)])
+    assert value(found, 0.15, 0.01) == -1
+
+
+@given(st.floats(0.4, 4.0), st.floats(-1.2, 1.2), st.floats(0.001, 0.3))
+@settings(max_examples=40, deadline=None)
+def test_a_single_ping_never_makes_a_cell_occupied(range_m, bearing, sigma):
+    echoes = [detection(range_m, bearing, sigma)] * 3
+    assert look(mapper(), [0.1], lambda _: echoes).data.max() < 65
+
+
+def test_a_one_sided_echo_from_one_place_never_becomes_occupied():
+    found = look(mapper(), every(200), lambda _: [one_sided(2.0, 0.0, 1.2)])
+    assert 50 < found.data.max() < 65
+
+
+def test_one_sided_echoes_from_several_places_agree_on_the_reflector():
+    """Triangulation: only around the crossing of the arcs does the map become occupied."""
+
+    def heard(pose):
+        echo = seen_from(pose, [(1.0, 1.0)])[0]
+        return [one_sided(echo.range_m, 0.0, 1.4)]
+
+    found = look(mapper(**LASTING), every(120, 0.05), heard, lambda t: Pose2(0.12 * t, 0.0, 0.0))
+    assert highest(found, 1.0, 1.0) >= 65
+    rows, columns = np.nonzero(found.data >= 65)
+    x = found.origin_x_m + (columns + 0.5) * found.resolution_m
+    y = found.origin_y_m + (rows + 0.5) * found.resolution_m
+    assert np.median(np.hypot(x - 1.0, y - 1.0)) < 0.2
+
+
+def test_ambiguous_bearings_wait_for_a_second_place():
+    def heard(pose):
+        true = seen_from(pose, [(2.0, 0.0)])[0]
+        wrong = true.bearing_rad + 0.4
+        return [
+            detection(
+                true.range_m, wrong, 0.01, alternatives=((true.bearing_rad, 0.45),), flags=AMBIGUOUS
+            )
+        ]
+
+    still = look(mapper(**LASTING), every(40), heard)
+    assert still.data.max() < 65
+    moving = look(mapper(**LASTING), every(40), heard, lambda t: Pose2(0.0, 0.3 * t - 0.6, 0.0))
+    assert highest(moving, 2.0, 0.0) >= 65
+    assert moving.data[np.nonzero(moving.data >= 65)].size < 12
+
+
+# ---------------------------------------------------------------------- what vanishes
+def test_a_phantom_is_cleared_when_echoes_from_behind_it_come_from_elsewhere():
+    to = mapper(**LASTING)
+    found = look(to, every(3), lambda _: [detection(1.5, 0.0)])
+    assert highest(found, 1.5, 0.0, 0.05) >= 65
+    aside = lambda t: Pose2(0.0, 0.03 * (t - 2.0), 0.0)  # noqa: E731
+    found = look(to, every(60, start_s=2.0), lambda p: seen_from(p, [(3.0, 0.0)]), aside)
+    assert highest(found, 1.5, 0.0, 0.05) < 50
+    assert highest(found, 3.0, 0.0) >= 65
+
+
+def test_second_bounces_behind_a_wall_do_not_become_obstacles():
+    to = mapper(**LASTING)
+    wall_at = 2.0
+    forward = lambda t: Pose2(0.1 * t, 0.0, 0.0)  # noqa: E731
+
+    def heard(pose):
+        once = wall_at - pose.x_m
+        return [detection(once, 0.0), detection(2 * once, 0.0)]
+
+    look(to, every(10), lambda p: heard(p)[:1], forward)
+    found = look(to, every(60, start_s=1.3), heard, forward)
+    assert highest(found, wall_at, 0.0) >= 65
+    beyond = found.data[:, int((wall_at + 0.3 - found.origin_x_m) / found.resolution_m) :]
+    assert beyond.max() < 65
+
+
+def test_what_moves_leaves_no_trail():
+    def heard(time_s):
+        return [detection(1.0 + 0.25 * time_s, 0.0)]
+
+    to = mapper()
+    for time_s in every(100):
+        odometry(to, time_s, time_s + 0.1)
+        to.add_ping("front", ping(time_s, *heard(time_s)))
+    odometry(to, 10.1, 10.2)
+    found = to.snapshot()
+    occupied = np.nonzero(found.data >= 65)[1] * found.resolution_m + found.origin_x_m
+    assert occupied.size > 0
+    assert occupied.min() > 1.0 + 0.25 * 10.0 - 0.6
+
+
+def test_cells_fade_with_time_until_they_are_unknown():
+    to = mapper(occupied_decay_s=5.0, free_decay_s=5.0)
+    pole = lambda _: [detection(1.0, 0.0)]  # noqa: E731
+    assert highest(look(to, every(10), pole), 1.0, 0.0) >= 65
+    found = look(to, every(2, start_s=41.0), lambda _: [detection(3.0, 1.0)])
+    assert highest(found, 1.0, 0.0) == -1
+
+
+# ---------------------------------------------------------------------- invariance
+def test_a_static_world_seen_twice_only_sharpens():
+    def back_and_forth(time_s):
+        return along_x(1.5 - abs(time_s % 3.0 - 1.5))
+
+    to = mapper(**LASTING)
+    first = look(to, every(30), lambda p: seen_from(p, POLES), back_and_forth)
+    second = look(to, every(30, start_s=3.1), lambda p: seen_from(p, POLES), back_and_forth)
+    decided = np.abs(first.data.astype(int) - 50) > 30
+    assert decided.sum() > 50
+    gain = np.abs(second.data.astype(int) - 50) - np.abs(first.data.astype(int) - 50)
+    assert np.mean(gain[decided] >= 0) > 0.95
+    for pole in POLES:
+        assert highest(second, *pole) >= highest(first, *pole) >= 65
+    assert (second.data >= 65).sum() <= (first.data >= 65).sum() * 1.3
+
+
+@given(st.integers(-40, 40), st.integers(-40, 40))
+@settings(max_examples=15, deadline=None)
+def test_moving_world_and_robot_by_whole_cells_moves_the_map(shift_x, shift_y):
+    dx, dy = shift_x / 16, shift_y / 16
+    moved_points = [(x + dx, y + dy) for x, y in POLES]
+    plain = drive_past(resolution_m=0.0625)
+    moved = drive_past(
+        moved_points,
+        resolution_m=0.0625,
+        pose_at=lambda t: Pose2(dx, dy).compose(along_x(t)),
+    )
+    assert moved.origin_x_m - plain.origin_x_m == pytest.approx(dx)
+    assert moved.origin_y_m - plain.origin_y_m == pytest.approx(dy)
+    # Points on a border of cells may fall to either side by rounding.
+    assert np.mean(moved.data != plain.data) < 0.003
+
+
+@pytest.mark.parametrize("turn", [0.5, math.pi / 2, 2.5])
+def test_turning_world_and_robot_turns_the_map(turn):
+    frame = Pose2(0.0, 0.0, turn)
+    turned_points = [(p.x_m, p.y_m) for p in (frame.compose(Pose2(x, y)) for x, y in POLES)]
+    plain = drive_past()
+    turned = drive_past(turned_points, pose_at=lambda t: frame.compose(along_x(t)))
+    rows, columns = np.nonzero(turned.data >= 65)
+    back = frame.inverse()
+    places = [
+        back.compose(
+            Pose2(
+                turned.origin_x_m + (c + 0.5) * turned.resolution_m,
+                turned.origin_y_m + (r + 0.5) * turned.resolution_m,
+            )
+        )
+        for r, c in zip(rows, columns, strict=True)
+    ]
+    assert all(highest(plain, p.x_m, p.y_m) >= 65 for p in places)
+    assert rows.size == pytest.approx((plain.data >= 65).sum(), rel=0.4)
+
+
+def two_heads_events():
+    mounts = {"left": Pose2(0.1, 0.1, 0.4), "right": Pose2(0.1, -0.1, -0.4)}
+    pings = [
+        (head, ping(t, *seen_from(along_x(t).compose(mount), POLES, 0.05)))
+        for t in every(15)
+        for head, mount in mounts.items()
+    ]
+    odometry_samples = [OdometrySample(0.02 * k, along_x(0.02 * k)) for k in range(100)]
+    return mounts, pings, odometry_samples
+
+
+def test_order_of_heads_within_one_ping_time_does_not_matter():
+    mounts, pings, samples = two_heads_events()
+    swapped = [p for k in range(0, len(pings), 2) for p in (pings[k + 1], pings[k])]
+    maps = []
+    for order in (pings, swapped):
+        to = LocalMapper(MappingConfig(), mounts)
+        maps.append(run_mapper(to, _merged(order, samples)).data)
+        assert to.counts["fused"] == len(pings)
+    np.testing.assert_array_equal(*maps)
+    assert maps[0].max() >= 65
+
+
+def _merged(pings, samples):
+    """Events in the order of time; pings keep their order among themselves."""
+    keyed = [(p[1].emission_time_s, 0, k, p) for k, p in enumerate(pings)]
+    keyed += [(s.time_s, 1, k, s) for k, s in enumerate(samples)]
+    return [event for *_, event in sorted(keyed, key=lambda e: e[:3])]
+
+
+@given(st.randoms(use_true_random=False), st.floats(0.0, 0.08))
+@settings(max_examples=15, deadline=None)
+def test_delays_between_the_topics_change_nothing(random, delay_s):
+    """Odometry and pings through their own topics, each in order, with different delays."""
+    mounts, pings, samples = two_heads_events()
+    config = MappingConfig(settle_s=0.2)
+    expected = run_mapper(LocalMapper(config, mounts), _merged(pings, samples))
+    keyed = [(p[1].emission_time_s + delay_s * random.random(), k, p) for k, p in enumerate(pings)]
+    keyed += [(s.time_s, 1000 + k, s) for k, s in enumerate(samples)]
+    events = [event for *_, event in sorted(keyed, key=lambda e: e[:2])]
+    got = run_mapper(LocalMapper(config, mounts), events)
+    np.testing.assert_array_equal(got.data, expected.data)
+    assert got.time_s == expected.time_s
+
+
+def test_snapshots_and_splitting_change_nothing():
+    mounts, pings, samples = two_heads_events()
+    events = _merged(pings, samples)
+    whole = run_mapper(LocalMapper(MappingConfig(), mounts), events)
+    split = LocalMapper(MappingConfig(), mounts)
+    for event in events:
+        if isinstance(event, OdometrySample):
+            split.add_odometry(event)
+        else:
+            split.add_ping(*event)
+        split.snapshot()
+    np.testing.assert_array_equal(run_mapper(split, []).data, whole.data)
+
+
+def test_inputs_are_not_modified():
+    mounts, pings, samples = two_heads_events()
+    samples[3] = OdometrySample(0.06, along_x(0.06), covariance=np.eye(3))
+    before = copy.deepcopy((mounts, pings, [s.covariance for s in samples]))
+    run_mapper(LocalMapper(MappingConfig(), mounts), _merged(pings, samples))
+    assert mounts == before[0]
+    assert pings == before[1]
+    np.testing.assert_array_equal(samples[3].covariance, before[2][3])
+
+
+# ---------------------------------------------------------------------- motion
+def test_mount_and_motion_during_the_flight_are_accounted_for():
+    """At 3 m/s the head moves 5 cm while the sound travels 3 m out and back."""
+    fine = {"resolution_m": 0.01, "width_m": 10.0, "max_speed_m_s": 10.0, "surface_width_m": 0.0}
+    mount = Pose2(0.2, 0.1, 0.0)
+    start, speed, wall_x = -1.0, 3.0, 3.0
+    to = LocalMapper(MappingConfig(**fine, **LASTING), {"front": mount})
+    pose_at = lambda t: Pose2(start + speed * t, 0.0, 0.0)  # noqa: E731
+
+    def heard(pose):
+        emitted_x = pose.x_m + mount.x_m
+        # Out: wall - emitted = c t1; back: (emitted + v t) - wall = -c (t - t1).
+        flight_s = 2 * (wall_x - emitted_x) / (SOUND_M_S + speed)
+        return [detection(flight_s * SOUND_M_S / 2, 0.0, 0.0005)]
+
+    found = look(to, every(10, 0.02), heard, pose_at)
+    rows, columns = np.nonzero(found.data >= 65)
+    x = found.origin_x_m + (columns + 0.5) * found.resolution_m
+    y = found.origin_y_m + (rows + 0.5) * found.resolution_m
+    assert x.mean() == pytest.approx(wall_x, abs=0.006)
+    assert y.mean() == pytest.approx(0.1, abs=0.006)
+
+
+def test_turning_during_the_flight_counts_at_reception():
+    turn_rad_s = 3.0
+    pose_at = lambda t: Pose2(0.0, 0.0, turn_rad_s * (t - 0.2))  # noqa: E731
+    flight_s = 2 * 3.0 / SOUND_M_S
+
+    def heard(pose):
+        return [detection(3.0, -(pose.yaw_rad + turn_rad_s * flight_s), 0.0005)]
+
+    fine = {"resolution_m": 0.01, "surface_width_m": 0.0} | LASTING
+    found = look(mapper(**fine), every(12, 0.02), heard, pose_at)
+    rows = np.nonzero(found.data >= 65)[0]
+    assert (found.origin_y_m + (rows + 0.5) * 0.01).mean() == pytest.approx(0.0, abs=0.006)
+
+
+# ---------------------------------------------------------------------- silence
+@pytest.mark.parametrize("flags", [PingFlag.NONE, PingFlag.INTERFERENCE, PingFlag.LEFT_DEAD])
+def test_silence_says_nothing_unless_asked_to_and_undisturbed(flags):
+    def after_silence(**values):
+        to = mapper(**LASTING, **values)
+        look(to, every(5), lambda _: [detection(0.8, 0.0), detection(0.8, 0.9)])
+        for time_s in every(60, start_s=1.0):
+            odometry(to, time_s, time_s + 0.1)
+            to.add_ping("front", ping(time_s, flags=flags))
+        return to.snapshot()
+
+    never = after_silence()
+    assert highest(never, 0.8, 0.0) >= 65
+    to_range = after_silence(silence_policy="clear_to_range", clear_range_m=1.0)
+    if flags is PingFlag.NONE:
+        assert highest(to_range, 0.8, 0.0) < 35
+    else:
+        assert highest(to_range, 0.8, 0.0) == highest(never, 0.8, 0.0)
+    outside_beam = 0.8 * math.cos(0.9), 0.8 * math.sin(0.9)
+    assert highest(to_range, *outside_beam) >= 65
+    too_far = after_silence(silence_policy="clear_to_range", clear_range_m=0.6)
+    assert highest(too_far, 0.8, 0.0) >= 65
+
+
+def test_silence_before_the_nearest_echo_only():
+    to = mapper(silence_policy="clear_to_range", clear_range_m=3.0)
+    found = look(to, every(20), lambda _: [detection(1.5, 0.0)])
+    assert value(found, 1.0, 0.3) < 35
+    assert value(found, 1.8, 0.3) == -1
+    assert highest(found, 1.5, 0.0) >= 65
+    assert to.counts[MapOutcome.FUSED.value] == 20
