@@ -21,7 +21,8 @@ _SEED_HALF_WIDTH_M = 0.03
 _RESEARCH_HALF_WIDTH_M = 0.012
 _SWITCH_NATS = 1.0
 _EXTRA_ROUNDS = 12
-_MISFIT_SIGMAS = 3.0
+_MISFIT_SHARE = 0.7
+"""A pair must gain a threshold; one object that leaves much less than that needs no look."""
 _MAX_SPLITS = 3
 _SURE_FACTOR = 6.0
 """An object whose linearised loss is this many thresholds needs no refit without it."""
@@ -43,6 +44,12 @@ def gain_threshold(model: HeadModel, ping: Conditioned, false_detections_per_pin
     both = ping.alive[0] and ping.alive[1]
     extra = (lambda x: math.log1p(x)) if both else (lambda x: 0.0)
     return float(brentq(lambda x: extra(x) - x - level, 0.0, 60.0))
+
+
+def range_min(model: HeadModel, ping: Conditioned) -> float:
+    """Nearest range whose echo peaks after the direct pulse has ended, m."""
+    first_peak_s = ping.blanking_end_s - model.pulses[0].peak_time_s
+    return model.range_of_delay(max(first_peak_s, 0.0))
 
 
 @dataclass(frozen=True, eq=False)
@@ -90,6 +97,7 @@ class ObjectFitter:
         self.windows: list[slice] = []
         self.sounds: list[ComplexArray] = []
         self.residual = ping.samples.copy()
+        self.range_min_m = range_min(model, ping)
 
     def fit(self, candidates: list[Candidate]) -> Explained:
         """Objects from candidates and from what the residual still shows."""
@@ -100,13 +108,14 @@ class ObjectFitter:
         self._split_misfits()
         self._add_from_residual()
         self._search_again()
+        self._merge_close()
         return self._drop_weak()
 
     # ------------------------------------------------------------------ steps of fit()
 
     def _try_add(self, delay_s: float) -> bool:
         range_m = self.model.range_of_delay(delay_s)
-        if not 0.02 < range_m < self.config.max_range_m:
+        if not self.range_min_m < range_m < self.config.max_range_m:
             return False
         width = _SEED_HALF_WIDTH_M + 0.25 * self.model.head.baseline_m
         found = scan(self.model, self.ping, self.residual, range_m, width, self.bearings)
@@ -140,7 +149,7 @@ class ObjectFitter:
         """
         for _ in range(_MAX_SPLITS):
             misfit = [self._misfit(i) for i in range(len(self.objects))]
-            if not misfit or max(misfit) < _MISFIT_SIGMAS:
+            if not misfit or max(misfit) < _MISFIT_SHARE * self.threshold:
                 return
             if not self._try_split(int(np.argmax(misfit))):
                 return
@@ -164,6 +173,26 @@ class ObjectFitter:
             near = slice(max(here - 2, 0), here + 3)
             if gain > float(found.gain[:, near].max()) + _SWITCH_NATS:
                 self._try_instead([i], one_object(best_range, best_bearing, strength), 0.0)
+
+    def _merge_close(self) -> None:
+        """See whether one object explains what two close ones do (two that repair a slip)."""
+        reach = self.model.speed_m_s * self.model.pulses[0].envelope_sigma_s
+        again = True
+        while again:
+            again = False
+            r = self.objects.range_m
+            close = [
+                (i, j) for i in range(r.size) for j in range(i) if abs(r[i] - r[j]) < reach
+            ]
+            for pair in close:
+                samples = self._alone(list(pair))
+                centre = float(np.mean(r[list(pair)]))
+                found = scan(self.model, self.ping, samples, centre, 0.5 * reach, self.bearings)
+                best_range, best_bearing, strength, _ = found.best()
+                one = one_object(best_range, best_bearing, strength)
+                if self._try_instead(list(pair), one, -self.threshold):
+                    again = True
+                    break
 
     def _drop_weak(self) -> Explained:
         """Drop what the likelihood does not miss, weakest first; measure what stays."""
@@ -229,13 +258,11 @@ class ObjectFitter:
         return float(np.vdot(sound, sound).real)
 
     def _misfit(self, i: int) -> float:
-        """Excess of the residual around an object, in standard deviations of noise."""
+        """Excess of the residual around an object over what noise leaves, nats."""
         window = self.windows[i]
         weight = self.ping.weight[:, window]
         left = self.residual[:, window] * weight
-        count = int(np.count_nonzero(weight))
-        excess = float(np.vdot(left, left).real) - count
-        return excess / math.sqrt(max(count, 1))
+        return float(np.vdot(left, left).real) - int(np.count_nonzero(weight))
 
     def _try_split(self, i: int) -> bool:
         near = self.model.speed_m_s * self.model.pulses[0].envelope_sigma_s
@@ -256,15 +283,17 @@ class ObjectFitter:
         self._replace_with(members, best.objects)
         return True
 
-    def _try_instead(self, members: list[int], others: Objects, extra: float) -> None:
+    def _try_instead(self, members: list[int], others: Objects, extra: float) -> bool:
         """Put other objects in the place of some, if the refined likelihood gains by it."""
         samples = self._alone(members)
         both = self.objects.take(members).join(others)
         window = window_of(self.model, self.ping, both)
         before = self._cost(self.objects.take(members), samples, window)
         after = refine(self.model, self.ping, samples, window, others, self.priors)
-        if after.cost < before - extra:
-            self._replace_with(members, after.objects)
+        if after.cost > before - extra:
+            return False
+        self._replace_with(members, after.objects)
+        return True
 
     def _cluster(self, i: int) -> list[int]:
         """Objects whose sound overlaps that of object i, in chains, i included."""

@@ -12,7 +12,7 @@ from ..types import EnvelopeFit, PingFlag, PingResult, RawEcho
 from .baseband import Baseband, receiver_filter, to_baseband
 from .conditioning import Conditioned, condition
 from .config import ProcessingConfig
-from .fit import Explained, ObjectFitter
+from .fit import Explained, ObjectFitter, range_min
 from .model import HeadModel
 from .report import report_detections
 from .search import matched_filter
@@ -55,7 +55,7 @@ class EchoPipeline:
             sequence=echo.sequence,
             detections=detections,
             speed_of_sound_m_s=model.speed_m_s,
-            range_min_m=self._range_min(model, ping),
+            range_min_m=range_min(model, ping),
             range_max_m=self._range_max(model, echo),
             beam_half_width_rad=self.head.transmitter.half_power_beam_width_rad / 2.0,
             noise=self._noise(model, ping),
@@ -83,11 +83,6 @@ class EchoPipeline:
         if known is None or echo.burst_cycles in known:
             return PingFlag.NONE
         return PingFlag.BURST_UNCALIBRATED
-
-    @staticmethod
-    def _range_min(model: HeadModel, ping: Conditioned) -> float:
-        first_peak_s = ping.blanking_end_s - model.pulses[0].peak_time_s
-        return model.range_of_delay(max(first_peak_s, 0.0))
 
     def _range_max(self, model: HeadModel, echo: RawEcho) -> float:
         # The echo's body must lie inside the record.

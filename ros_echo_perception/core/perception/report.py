@@ -11,7 +11,7 @@ from ..types import Detection, DetectionFlag, Ears, FloatArray
 from .bearing import BearingPosterior, bearing_posterior
 from .conditioning import Conditioned
 from .config import ProcessingConfig
-from .fit import Explained
+from .fit import Explained, range_min
 from .model import HeadModel
 from .search import bearing_grid, scan
 
@@ -29,11 +29,12 @@ def report_detections(
         _detection(model, ping, explained, i, bearings, config)
         for i in range(len(explained.objects))
     ]
+    nearest_m = range_min(model, ping)
     wanted = [
         d
         for d in found
         if d.existence_probability >= config.min_existence_probability
-        and d.range_m <= config.max_range_m
+        and nearest_m <= d.range_m <= config.max_range_m
     ]
     return tuple(sorted(wanted, key=lambda d: d.range_m))
 
