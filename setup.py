@@ -28,14 +28,14 @@ setup(
     package_data={name: ["py.typed"]},
     data_files=shared_files("config", "msg"),
     python_requires=">=3.10",
-    # The oldest versions are those of Ubuntu 24.04, on which ROS 2 Jazzy runs.
+    # The oldest versions are those of Ubuntu 24.04, on which ROS 2 Jazzy runs (rosbags: pip only).
     install_requires=[
         "click>=8.1",
         "matplotlib>=3.6",
         "numpy>=1.26",
         "PyYAML>=6.0",
         "rich>=13.7",
-        "rosbags>=0.10",
+        "rosbags>=0.11",
         "scipy>=1.11",
     ],
     entry_points={
