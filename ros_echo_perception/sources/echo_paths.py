@@ -140,19 +140,20 @@ def _ear(
     source = motion.position(sender.position_m, np.zeros(n))
     wave_number = 2.0 * math.pi * head.carrier_hz / c
     height = sender.position_m[2] - ear.position_m[2]
-    tof = np.zeros(n)
+    tof = before = np.zeros(n)
     # The receiver's place depends on the time of flight and the other way round.
     for _ in range(2 if motion.moving else 1):
         rays = _rays(world, found, source, motion.position(ear.position_m, tof), wave_number)
-        length = np.hypot(rays.length, height)
-        tof = length / c
+        before, tof = tof, np.hypot(rays.length, height) / c
+    towards = (rays.arrival @ motion.velocity(ear.position_m)) / _length(rays.arrival)
+    if motion.moving:  # one Newton step; the receiver shortens the way while it drives at it
+        tof = (c * tof + towards * before) / (c + towards)
     leaving = np.arctan2(rays.departure[:, 1], rays.departure[:, 0]) - motion.pose.yaw_rad
     coming = np.arctan2(rays.arrival[:, 1], rays.arrival[:, 0]) - motion.pose.yaw_rad
     coming = coming - motion.turn_rad_s * tof
     amplitude = rays.amplitude * directivity(sender, leaving) * directivity(ear, coming)
-    towards = (rays.arrival @ motion.velocity(ear.position_m)) / _length(rays.arrival)
     ahead = (rays.departure @ motion.velocity(sender.position_m)) / _length(rays.departure)
-    return _Ear(length, tof, np.asarray(amplitude), np.asarray((c + towards) / (c - ahead)))
+    return _Ear(c * tof, tof, np.asarray(amplitude), np.asarray((c + towards) / (c - ahead)))
 
 
 def _rays(

@@ -17,7 +17,9 @@ from ..core.fields import read_text
 from ..core.types import OdometrySample, Pose2
 
 ODOMETRY_COLUMNS = ("t", "x", "y", "yaw", "vx", "wz")
-_DAMAGED = (ValueError, struct.error, EOFError, ArithmeticError, LookupError, TypeError)
+_DAMAGED = (
+    ValueError, struct.error, EOFError, ArithmeticError, LookupError, TypeError, NameError, MemoryError
+)  # fmt: skip
 """What scipy's reader raises on damaged files; it has no exception of its own."""
 POSE_COLUMNS = ("t", "x", "y", "yaw")
 

@@ -106,7 +106,8 @@ class Synthesis:
         bins, step = self._bins, -2j * math.pi * self.unit.sample_rate_hz / self._n_fft
         coarse = np.exp(step * np.outer(delay_s, np.arange(bins[0], bins[-1] + 1, fine)))
         table = coarse[:, :, None] * np.exp(step * np.outer(delay_s, np.arange(fine)))[:, None, :]
-        return np.asarray(table.reshape(len(delay_s), -1)[:, : len(bins)])
+        n_columns = coarse.shape[1] * fine
+        return np.asarray(table.reshape(len(delay_s), n_columns)[:, : len(bins)])
 
     def _emitted(self, doppler: FloatArray) -> ComplexArray:
         """Spectrum of the emitted burst as it arrives with a Doppler shift, (n, bins).
