@@ -6,6 +6,7 @@ import subprocess
 import sys
 import time
 from pathlib import Path
+from typing import ClassVar
 
 import pytest
 
@@ -35,6 +36,8 @@ class Peer:
         """Spin until the condition is truthy; returns its value."""
         end = time.monotonic() + timeout_s
         while not (value := condition()):
+            for running in RunningNode.expected:
+                assert running.process.poll() is None, f"a node ended:\n{running.text}"
             assert time.monotonic() < end, f"timed out after {timeout_s:g} s waiting for {what}"
             self._executor.spin_once(timeout_sec=0.05)
         return value
@@ -84,6 +87,9 @@ class Peer:
 class RunningNode:
     """A node of the package in a process of its own."""
 
+    expected: ClassVar[list] = []
+    """Nodes that should be running; a wait fails at once when one of them has ended."""
+
     def __init__(self, executable, log, arguments):
         self.log = log
         with log.open("wb") as file:
@@ -93,6 +99,7 @@ class RunningNode:
                 stdout=file,
                 stderr=subprocess.STDOUT,
             )
+        self.expected.append(self)
 
     @property
     def text(self):
@@ -100,10 +107,18 @@ class RunningNode:
 
     def interrupt(self):
         """SIGINT as Ctrl-C sends it; the exit code."""
+        self.expected.remove(self)
         self.process.send_signal(signal.SIGINT)
         return self.process.wait(10.0)
 
+    def exit_code(self, timeout_s=START_S):
+        """Exit code of a node that ends by itself."""
+        self.expected.remove(self)
+        return self.process.wait(timeout_s)
+
     def close(self):
+        if self in self.expected:
+            self.expected.remove(self)
         if self.process.poll() is None:
             self.process.kill()
             self.process.wait(10.0)

@@ -141,7 +141,8 @@ def test_no_finite_range_lies_outside_the_stated_limits():
         scan = scan_from_result(ping(*echoes), config)
         finite = scan.ranges_m[np.isfinite(scan.ranges_m)]
         assert finite.size
-        assert finite.min() >= scan.range_min_m and finite.max() <= scan.range_max_m
+        assert finite.min() >= scan.range_min_m
+        assert finite.max() <= scan.range_max_m
 
 
 def test_limits_that_contradict_are_refused():

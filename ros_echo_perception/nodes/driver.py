@@ -39,7 +39,7 @@ class DriverNode(Node):
         paced = self.settings.pacing == "real_time"
         self._gate = None if paced else ConsumerGate()
         if self._gate is not None:
-            create_subscription(self, topics.DETECTIONS, self._on_detections)
+            self._answers = create_subscription(self, topics.DETECTIONS, self._on_detections)
         self.player = SourcePlayer(
             source,
             self._emit,
@@ -57,7 +57,9 @@ class DriverNode(Node):
         self._raw = create_publisher(self, topics.RAW_ECHO)
         self._temperature = create_publisher(self, topics.TEMPERATURE)
         self._odometry = create_publisher(self, topics.ODOMETRY) if self.info.has_odometry else None
-        self._clock_publisher = create_publisher(self, topics.CLOCK) if self.settings.publish_clock else None
+        self._clock_publisher = (
+            create_publisher(self, topics.CLOCK) if self.settings.publish_clock else None
+        )
         self._tf = transforms.TransformSender(self) if self.settings.publish_tf else None
         if self._tf is not None and self.info.mount is not None:
             self._tf.send_static(
@@ -71,11 +73,23 @@ class DriverNode(Node):
 
     def _wait_for_consumer(self, stop: threading.Event) -> None:
         end = time.monotonic() + self.settings.wait_for_consumer_s
-        while time.monotonic() < end and not stop.is_set():
-            if self._raw.get_subscription_count():
+        while not stop.is_set():
+            if self._gate is None and time.monotonic() >= end:
+                break
+            if self._consumer_is_there():
                 break
             stop.wait(0.05)
         self._origin_s = time.time()
+
+    def _consumer_is_there(self) -> bool:
+        """Whether somebody listens; with pacing = consumer, somebody who also answers."""
+        listeners = self._raw.get_subscription_count()
+        if self._gate is None:
+            return listeners > 0
+        answering = self.get_publishers_info_by_topic(self._answers.topic_name)
+        listening = self.get_subscriptions_info_by_topic(self._raw.topic_name)
+        common = {_node_of(end) for end in answering} & {_node_of(end) for end in listening}
+        return bool(common) and listeners >= len(listening)
 
     def _on_detections(self, msg: Any) -> None:
         if self._gate is not None:
@@ -137,6 +151,11 @@ class DriverNode(Node):
         """Stop playing, then end the node."""
         self.player.stop()
         super().destroy_node()
+
+
+def _node_of(endpoint: Any) -> tuple[str, str]:
+    """Namespace and name of the node that an endpoint of a topic belongs to."""
+    return endpoint.node_namespace, endpoint.node_name
 
 
 def live_text(info: SourceInfo) -> str:

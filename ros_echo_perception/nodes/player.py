@@ -32,14 +32,23 @@ def release_time_s(event: Event) -> float:
 
 
 def by_release(events: Iterable[Event]) -> Iterator[Event]:
-    """Events in the order of their release, from events in the order of their time."""
+    """Events in the order of their release, from events in the order of their time.
+
+    If these break off with an exception, it comes after all events that were there.
+    """
     waiting: list[tuple[float, int, Event]] = []
-    for count, event in enumerate(events):
-        while waiting and waiting[0][0] <= event_time_s(event):
-            yield heapq.heappop(waiting)[2]
-        heapq.heappush(waiting, (release_time_s(event), count, event))
+    fault: Exception | None = None
+    try:
+        for count, event in enumerate(events):
+            while waiting and waiting[0][0] <= event_time_s(event):
+                yield heapq.heappop(waiting)[2]
+            heapq.heappush(waiting, (release_time_s(event), count, event))
+    except Exception as error:
+        fault = error
     while waiting:
         yield heapq.heappop(waiting)[2]
+    if fault is not None:
+        raise fault
 
 
 def looped(source: EchoSource, loop: bool) -> Iterator[Event]:
@@ -165,12 +174,12 @@ class SourcePlayer:
             self._source.close()
 
     def _play(self) -> None:
-        events = by_release(looped(self._source, self._loop))
+        events = looped(self._source, self._loop)
         first = next(events, None)
         if first is None:
             return
         origin_s, started_s = event_time_s(first), time.monotonic()
-        for event in itertools.chain((first,), events):
+        for event in by_release(itertools.chain((first,), events)):
             if self._speed is not None:
                 due_s = (release_time_s(event) - origin_s) / self._speed
                 started_s = self._wait_until(started_s, due_s)

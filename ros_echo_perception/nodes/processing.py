@@ -127,14 +127,14 @@ class ProcessingNode(Node):
             values["noise left"], values["noise right"] = self._last.noise
             values["flags"] = flag_names(flags)
             values["detections in last ping"] = len(self._last.detections)
-        level, text = judge(self.activity, flags)
+        level, text = judge(self.activity, flags, self._lost)
         return Status(level, text, values, self.head.name)
 
 
 _DEAD = (PingFlag.LEFT_DEAD, PingFlag.RIGHT_DEAD)
 
 
-def judge(activity: Activity, flags: PingFlag) -> tuple[bytes, str]:
+def judge(activity: Activity, flags: PingFlag, lost: int = 0) -> tuple[bytes, str]:
     """Level and text of the diagnostics from what came and what the last ping said."""
     dead = [name for name, flag in zip(("left", "right"), _DEAD, strict=True) if flags & flag]
     if len(dead) == 2:
@@ -145,6 +145,8 @@ def judge(activity: Activity, flags: PingFlag) -> tuple[bytes, str]:
         return WARN, f"the {dead[0]} ear is dead"
     if activity.dropped:
         return WARN, f"{sum(activity.dropped.values())} raw echoes dropped"
+    if lost:
+        return WARN, f"{lost} raw echoes lost on the way, or processing cannot keep up"
     if flags & PingFlag.SIMULATED:
         return WARN, "processing SIMULATED echoes"
     if flags & PingFlag.REPLAYED:

@@ -33,7 +33,8 @@ class DriverSettings(Settings):
     start_offset_s: float = setting(0.0, "Begin this far into the source", "s", 0.0, 1e6)
     pacing: str = setting(
         "real_time",
-        "real_time: as the source's clock says; consumer: as fast as the processing node answers",
+        "real_time: as the source's clock says; consumer: as fast as the processing node answers, "
+        "once there is one",
         choices=("real_time", "consumer"),
     )
     real_time_factor: float = setting(
@@ -41,7 +42,7 @@ class DriverSettings(Settings):
     )  # fmt: skip
     wait_for_consumer_s: float = setting(
         0.0,
-        "Wait at most this long for a subscriber of raw_echo before the first ping",
+        "With pacing = real_time: wait at most this long for a subscriber before the first ping",
         "s", 0.0, 600.0,
     )  # fmt: skip
     head_frame: str = setting("echo_head", "Frame of the head")
