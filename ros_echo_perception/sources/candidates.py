@@ -83,9 +83,7 @@ def _walls(world: World, eye: FloatArray, max_range_m: float) -> tuple[IndexArra
 def _rounds(world: World, eye: FloatArray, max_range_m: float) -> tuple[IndexArray, FloatArray]:
     outward = eye - world.centres
     distance = np.hypot(outward[:, 0], outward[:, 1])
-    index = np.flatnonzero(
-        (distance - world.radii < max_range_m) & (distance > world.radii + 1e-3)
-    )
+    index = np.flatnonzero((distance - world.radii < max_range_m) & (distance > world.radii + 1e-3))
     share = world.radii[index] / distance[index]
     return index, world.centres[index] + share[:, None] * outward[index]
 
@@ -124,9 +122,9 @@ def _vertices(
 def _directions(world: World) -> tuple[FloatArray, FloatArray, NDArray[np.bool_]]:
     first = np.array([v.along_first for v in world.vertices], float).reshape(-1, 2)
     free = np.array([v.along_second is None for v in world.vertices], bool)
-    second = np.array(
-        [v.along_second or v.along_first for v in world.vertices], float
-    ).reshape(-1, 2)
+    second = np.array([v.along_second or v.along_first for v in world.vertices], float).reshape(
+        -1, 2
+    )
     return first, second, free
 
 

@@ -195,9 +195,7 @@ def _wall_rays(world: World, found: Candidates, source: FloatArray, ear: FloatAr
     return _Rays(length, (1.0 / length).astype(complex), departure, arrival)
 
 
-def _round_rays(
-    world: World, index: IndexArray, source: FloatArray, ear: FloatArray
-) -> _Rays:
+def _round_rays(world: World, index: IndexArray, source: FloatArray, ear: FloatArray) -> _Rays:
     radius = world.radii[index]
     point = glancing_point(source, ear, world.centres[index], radius)
     departure, arrival = point - source, point - ear
@@ -209,9 +207,7 @@ def _round_rays(
     return _Rays(way_in + way_out, amplitude.astype(complex), departure, arrival)
 
 
-def _edge_rays(
-    found: Candidates, source: FloatArray, ear: FloatArray, wave_number: float
-) -> _Rays:
+def _edge_rays(found: Candidates, source: FloatArray, ear: FloatArray, wave_number: float) -> _Rays:
     departure, arrival = found.edge_point - source, found.edge_point - ear
     length = _length(departure) + _length(arrival)
     amplitude = edge_amplitude(

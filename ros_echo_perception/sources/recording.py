@@ -213,9 +213,7 @@ def _samples(path: Path, rate_hz: float, n_pings: int, n_samples: int) -> NDArra
         )
     if len(samples) != n_pings * n_samples:
         allowed = f"{n_pings} pings x {n_samples} samples = {n_pings * n_samples}"
-        raise FileFormatError(
-            refuse("number of frames", len(samples), allowed, remedy, str(path))
-        )
+        raise FileFormatError(refuse("number of frames", len(samples), allowed, remedy, str(path)))
     by_ping = samples.reshape(n_pings, n_samples, 2).transpose(0, 2, 1)
     return np.ascontiguousarray(by_ping)
 

@@ -18,8 +18,15 @@ from ..core.types import OdometrySample, Pose2
 
 ODOMETRY_COLUMNS = ("t", "x", "y", "yaw", "vx", "wz")
 _DAMAGED = (
-    ValueError, struct.error, EOFError, ArithmeticError, LookupError, TypeError, NameError, MemoryError
-)  # fmt: skip
+    ValueError,
+    struct.error,
+    EOFError,
+    ArithmeticError,
+    LookupError,
+    TypeError,
+    NameError,
+    MemoryError,
+)
 """What scipy's reader raises on damaged files; it has no exception of its own."""
 POSE_COLUMNS = ("t", "x", "y", "yaw")
 
@@ -71,8 +78,9 @@ def read_table(path: Path, columns: tuple[str, ...]) -> NDArray[np.float64]:
     missing = [name for name in columns if name not in (reader.fieldnames or ())]
     if missing:
         raise FileFormatError(
-            refuse("columns", reader.fieldnames, "a header with " + ",".join(columns),
-                   file=str(path))
+            refuse(
+                "columns", reader.fieldnames, "a header with " + ",".join(columns), file=str(path)
+            )
         )
     rows: list[list[float]] = []
     for number, row in enumerate(reader, start=2):

@@ -81,9 +81,7 @@ def write_calibration_recording(
         seed=seed, unit_error_scale=unit_error_scale, ping_rate_hz=5.0, temperature_error_c=0.2
     )
     source = bench_source(head, calibration_grid(), config)
-    return write_simulated_recording(
-        source, path, category="calibration", tags=("pole on a grid",)
-    )
+    return write_simulated_recording(source, path, category="calibration", tags=("pole on a grid",))
 
 
 def world_to_json(world: World) -> dict[str, Any]:

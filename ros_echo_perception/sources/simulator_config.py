@@ -38,8 +38,10 @@ class SimulatorConfig(Settings):
         "", 1e-4, 100.0,
     )  # fmt: skip
     crosstalk_level: float = setting(
-        0.35, "Peak of the direct pulse in the ears, as a fraction of full scale", "", 0.0, 100.0
-    )
+        0.35,
+        "Peak of the direct pulse's envelope in the ears, as a fraction of full scale",
+        "", 0.0, 100.0,
+    )  # fmt: skip
     noise_rms: float = setting(
         0.0015, "Noise of each receiver up to half the sample rate, as a fraction of full scale",
         "", 0.0, 1.0,

@@ -138,9 +138,7 @@ class TruthMaker:
         return list(map(bool, masked)), list(map(bool, drowned))
 
 
-def _strongest_of_each(
-    ids: tuple[str, ...], order: list[int], snr_db: FloatArray
-) -> list[int]:
+def _strongest_of_each(ids: tuple[str, ...], order: list[int], snr_db: FloatArray) -> list[int]:
     """Both ways over a wall and a pole are one echo: keep the stronger."""
     best: dict[str, int] = {}
     for i in order:
@@ -152,9 +150,7 @@ def _strongest_of_each(
 def _envelope(synthesis: Synthesis, ear: int) -> FloatArray:
     """Envelope of the pulse over the time since its start, 1 at its peak."""
     unit, n = synthesis.unit, 4096
-    frequency = np.asarray(
-        unit.carrier_hz + np.fft.fftfreq(n, _ENVELOPE_STEP_S), dtype=np.float64
-    )
+    frequency = np.asarray(unit.carrier_hz + np.fft.fftfreq(n, _ENVELOPE_STEP_S), dtype=np.float64)
     near = np.abs(frequency - unit.carrier_hz) < 0.3 * unit.carrier_hz
     spectrum = np.zeros(n, complex)
     spectrum[near] = echo_spectrum(unit, ear, frequency[near], synthesis.config.burst_cycles)
