@@ -71,7 +71,16 @@ def bearing_posterior(
     # A peak narrower than the grid has the width that the fit says, whatever the grid shows.
     spread = np.where(spread < step, fitted_sigma_rad, np.maximum(spread, fitted_sigma_rad))
     spread[own] = max(fitted_sigma_rad, spread[own] if spread[own] > step else 0.0)
-    return _summary(weight, mean, spread, own)
+    return _summary(weight, mean, spread)
+
+
+def among_rivals(
+    rivals: tuple[tuple[float, float], ...], fitted_sigma_rad: float
+) -> BearingPosterior:
+    """Posterior from several equally likely explanations, as (bearing_rad, weight)."""
+    mean = np.array([bearing for bearing, _ in rivals])
+    weight = np.array([share for _, share in rivals])
+    return _summary(weight, mean, np.full(mean.size, fitted_sigma_rad))
 
 
 def _over_bearing(found: Scan) -> FloatArray:
@@ -107,20 +116,17 @@ def _moments(
     return weight, mean, np.sqrt(second)
 
 
-def _summary(
-    weight: FloatArray, mean: FloatArray, spread: FloatArray, own: int
-) -> BearingPosterior:
+def _summary(weight: FloatArray, mean: FloatArray, spread: FloatArray) -> BearingPosterior:
     order = np.argsort(weight)[::-1]
     top = int(order[0])
     sure = weight[top] >= _SURE_WEIGHT
     centre = float(mean[top]) if sure else float(weight @ mean)
     variance = float(weight @ (spread**2 + (mean - centre) ** 2))
     ambiguous = not sure
-    reference = top
     alternatives = tuple(
         (float(mean[i]), float(weight[i]))
         for i in order
-        if i != reference and weight[i] >= _MIN_WEIGHT
+        if i != top and weight[i] >= _MIN_WEIGHT
     )[:_MAX_PEAKS]
     sigma = math.sqrt(variance)
     significant = np.cumsum(weight[order]) - weight[order] < 0.95

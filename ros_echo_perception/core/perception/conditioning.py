@@ -6,7 +6,7 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.ndimage import maximum_filter1d
+from scipy.ndimage import binary_dilation, maximum_filter1d
 
 from ..types import ComplexArray, FloatArray, FrontEndFlag, PingFlag, RawEcho
 from .baseband import Baseband
@@ -20,6 +20,10 @@ _DIRECT_HEARD_S = 2.5e-3
 _DIRECT_MODEL_ERROR = 0.3
 """The direct pulse takes paths that the template does not know (head body, mounting)."""
 _TAIL_STEPS = 24
+_CLIP_ERROR = 0.1
+_CLIP_REACH_S = 0.5e-3
+"""Near clipped samples the flanks are distorted by what the converter cut off, by about this
+share of full scale."""
 _DEAD_RATIO = 0.02
 _DRIFT_FRACTION = 0.02
 
@@ -73,6 +77,7 @@ def condition(
     variance = np.empty(samples.shape)
     weight = np.zeros(samples.shape)
     blanking_end = 0.0
+    reach = max(1, int(round(_CLIP_REACH_S / baseband.step_s)))
     for ear in range(2):
         if not alive[ear]:
             continue
@@ -86,6 +91,7 @@ def condition(
             profile**2
             + (_DIRECT_MODEL_ERROR * np.abs(direct)) ** 2
             + (model_error * strong) ** 2
+            + (_CLIP_ERROR * binary_dilation(baseband.clipped[ear], iterations=reach)) ** 2
         )
         covered_s = _decayed(baseband, ear, covered_s, noise[ear])
         known = ~baseband.clipped[ear] & (baseband.time_s > covered_s)

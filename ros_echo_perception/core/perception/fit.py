@@ -12,6 +12,7 @@ from ..types import ComplexArray, FloatArray
 from .conditioning import Conditioned
 from .config import ProcessingConfig
 from .joint import Objects, Priors, Refined, no_objects, one_object, refine, signals, window_of
+from .interference import find_click, is_click
 from .model import HeadModel
 from .pairing import Candidate
 from .search import bearing_grid, matched_filter, scan
@@ -20,6 +21,8 @@ from .split import best_pairs
 _SEED_HALF_WIDTH_M = 0.03
 _RESEARCH_HALF_WIDTH_M = 0.012
 _SWITCH_NATS = 1.0
+_CLICK_NATS = 4.0
+_RIVAL_NATS = 4.0
 _EXTRA_ROUNDS = 12
 _MISFIT_SHARE = 0.7
 """A pair must gain a threshold; one object that leaves much less than that needs no look."""
@@ -52,6 +55,10 @@ def range_min(model: HeadModel, ping: Conditioned) -> float:
     return model.range_of_delay(max(first_peak_s, 0.0))
 
 
+Rivals = tuple[tuple[float, float], ...]
+"""Bearings with their weights."""
+
+
 @dataclass(frozen=True, eq=False)
 class Explained:
     """The objects that explain a ping.
@@ -75,6 +82,9 @@ class Explained:
     sounds: list[ComplexArray]
     residual: ComplexArray
     threshold: float
+    rivals: list[Rivals]
+    """For each object: bearings with weights of equally likely pairs; empty if there are none."""
+    interference: bool
 
     def alone(self, i: int) -> ComplexArray:
         """Samples (2, n) with all objects but one taken off."""
@@ -98,6 +108,8 @@ class ObjectFitter:
         self.sounds: list[ComplexArray] = []
         self.residual = ping.samples.copy()
         self.range_min_m = range_min(model, ping)
+        self.interference = False
+        self.rivals: list[Rivals] = []
 
     def fit(self, candidates: list[Candidate]) -> Explained:
         """Objects from candidates and from what the residual still shows."""
@@ -121,6 +133,17 @@ class ObjectFitter:
         found = scan(self.model, self.ping, self.residual, range_m, width, self.bearings)
         best_range, best_bearing, strength, gain = found.best()
         if gain < self.threshold:
+            return False
+        click = find_click(
+            self.model.head,
+            self.model.receiver,
+            self.ping,
+            self.residual,
+            delay_s + self.model.pulses[0].peak_time_s,
+        )
+        if is_click(click, gain, _CLICK_NATS):
+            self.residual[:, click.window] -= click.sound
+            self.interference = True
             return False
         self._append(one_object(best_range, best_bearing, strength))
         self._replace(self._cluster(len(self.objects) - 1))
@@ -184,7 +207,7 @@ class ObjectFitter:
             close = [
                 (i, j) for i in range(r.size) for j in range(i) if abs(r[i] - r[j]) < reach
             ]
-            for pair in close:
+            for pair in close[:_MAX_SPLITS]:
                 samples = self._alone(list(pair))
                 centre = float(np.mean(r[list(pair)]))
                 found = scan(self.model, self.ping, samples, centre, 0.5 * reach, self.bearings)
@@ -193,6 +216,8 @@ class ObjectFitter:
                 if self._try_instead(list(pair), one, -self.threshold):
                     again = True
                     break
+                if not any(self.rivals[i] for i in pair):
+                    self._try_pairs(list(pair))
 
     def _drop_weak(self) -> Explained:
         """Drop what the likelihood does not miss, weakest first; measure what stays."""
@@ -218,6 +243,8 @@ class ObjectFitter:
             sounds=self.sounds,
             residual=self.residual,
             threshold=self.threshold,
+            rivals=self.rivals,
+            interference=self.interference,
         )
 
     # ------------------------------------------------------------------------- helpers
@@ -231,11 +258,13 @@ class ObjectFitter:
             gain = self._gains(refined, samples)
             weakest = int(np.argmin(gain))
             if gain[weakest] >= self.threshold:
-                self._replace_with(members, refined.objects)
+                rivals = [self.rivals[i] for i in members]
+                self._replace_with(members, refined.objects, rivals)
                 return Measured(refined.objects, gain, refined.covariance)
             keep = [i for i in range(len(cluster)) if i != weakest]
             first_new = len(self.objects) - len(members)
-            self._replace_with(members, refined.objects.take(keep))
+            rivals = [self.rivals[members[i]] for i in keep]
+            self._replace_with(members, refined.objects.take(keep), rivals)
             members = list(range(first_new, len(self.objects)))
             if not members:
                 return Measured(no_objects(), np.zeros(0), np.zeros((0, 3, 3)))
@@ -268,20 +297,43 @@ class ObjectFitter:
         near = self.model.speed_m_s * self.model.pulses[0].envelope_sigma_s
         distance = np.abs(self.objects.range_m - self.objects.range_m[i])
         members = [int(j) for j in np.argsort(distance)[:2] if distance[j] < near]
-        samples = self._alone(members)
-        extra = self.threshold if len(members) == 1 else 0.0
-        centre = float(np.mean(self.objects.range_m[members]))
-        window = window_of(self.model, self.ping, self.objects.take(members))
-        now = self._cost(self.objects.take(members), samples, window)
-        best: Refined | None = None
-        for pair in best_pairs(self.model, self.ping, samples, centre, self.config):
-            refined = refine(self.model, self.ping, samples, window, pair, self.priors)
-            if best is None or refined.cost < best.cost:
-                best = refined
-        if best is None or best.cost > now - extra - _SWITCH_NATS:
+        return self._try_pairs(members)
+
+    def _try_pairs(self, members: list[int]) -> bool:
+        """Put the best pair in the place of one or two objects, if the likelihood gains."""
+        window = slice(
+            min(self.windows[i].start for i in members), max(self.windows[i].stop for i in members)
+        )
+        if self.ping.clipped[:, window].any():
             return False
-        self._replace_with(members, best.objects)
+        samples = self._alone(members)
+        centre = float(np.mean(self.objects.range_m[members]))
+        now = self._refined(self.objects.take(members), samples)
+        pairs = [
+            refine(self.model, self.ping, samples, window, pair, self.priors)
+            for pair in best_pairs(self.model, self.ping, samples, centre, self.config)
+        ]
+        if not pairs:
+            return False
+        score = np.array([pair.cost + self._implausibility(pair.objects) for pair in pairs])
+        best = pairs[int(np.argmin(score))]
+        extra = self.threshold if len(members) == 1 else 0.0
+        if float(score.min()) > now.cost + self._implausibility(now.objects) - extra:
+            return False
+        weight = np.exp(-(score - score.min()))
+        rivals = _rivals(best.objects, [p.objects for p in pairs], weight)
+        self._replace_with(members, best.objects, rivals)
         return True
+
+    def _implausibility(self, objects: Objects) -> float:
+        """Prior cost in nats: strong objects that cancel each other, or lie off the beams.
+
+        Strengths are as likely in every decade, p(a) ~ 1/|a|^2, and a bearing is as likely as
+        its better ear's gain.
+        """
+        gain = self.model.geometry(objects.range_m, objects.bearing_rad).gain.max(axis=0)
+        heard = np.maximum(np.abs(objects.strength) * gain, 1e-12)
+        return float(np.sum(2.0 * np.log(heard) - np.log(np.maximum(gain, 1e-3))))
 
     def _try_instead(self, members: list[int], others: Objects, extra: float) -> bool:
         """Put other objects in the place of some, if the refined likelihood gains by it."""
@@ -316,25 +368,29 @@ class ObjectFitter:
 
     def _replace(self, members: list[int]) -> None:
         refined = self._refined(self.objects.take(members), self._alone(members))
-        self._replace_with(members, refined.objects)
+        self._replace_with(members, refined.objects, [self.rivals[i] for i in members])
 
-    def _replace_with(self, members: list[int], objects: Objects) -> None:
+    def _replace_with(
+        self, members: list[int], objects: Objects, rivals: list[Rivals] | None = None
+    ) -> None:
         """Take the members off the list and put other objects at its end."""
         self.residual = self._alone(members)
         rest = [j for j in range(len(self.objects)) if j not in members]
         self.objects = self.objects.take(rest)
         self.windows = [self.windows[j] for j in rest]
         self.sounds = [self.sounds[j] for j in rest]
+        self.rivals = [self.rivals[j] for j in rest]
         for k in range(len(objects)):
-            self._append(objects.take([k]))
+            self._append(objects.take([k]), rivals[k] if rivals else ())
 
-    def _append(self, one: Objects) -> None:
+    def _append(self, one: Objects, rivals: Rivals = ()) -> None:
         window = window_of(self.model, self.ping, one)
         rendered = signals(self.model, one, self.ping.time_s[window]).value[:, 0, :]
         sound = one.strength[0] * rendered
         self.objects = self.objects.join(one)
         self.windows.append(window)
         self.sounds.append(sound)
+        self.rivals.append(rivals)
         self.residual[:, window] -= sound
 
     def _alone(self, members: list[int]) -> ComplexArray:
@@ -351,3 +407,17 @@ class Measured:
     objects: Objects
     gain: FloatArray
     covariance: FloatArray
+
+
+def _rivals(best: Objects, pairs: list[Objects], weight: FloatArray) -> list[Rivals]:
+    """Bearings that other likely pairs give each of the two objects, in order of bearing."""
+    keep = weight > math.exp(-_RIVAL_NATS)
+    if np.count_nonzero(keep) < 2:
+        return [(), ()]
+    sorted_bearings = np.array([np.sort(p.bearing_rad) for p in pairs])[keep]
+    share = weight[keep] / weight[keep].sum()
+    rank = np.argsort(np.argsort(best.bearing_rad))
+    return [
+        tuple(zip(sorted_bearings[:, r].tolist(), share.tolist(), strict=True))
+        for r in rank.tolist()
+    ]

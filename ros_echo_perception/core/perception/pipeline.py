@@ -59,7 +59,7 @@ class EchoPipeline:
             range_max_m=self._range_max(model, echo),
             beam_half_width_rad=self.head.transmitter.half_power_beam_width_rad / 2.0,
             noise=self._noise(model, ping),
-            flags=ping.flags | self._burst_flag(echo),
+            flags=ping.flags | self._burst_flag(echo) | _interference_flag(explained),
             envelope=_envelope(baseband, ping, explained),
         )
 
@@ -93,6 +93,10 @@ class EchoPipeline:
     def _noise(model: HeadModel, ping: Conditioned) -> tuple[float, float]:
         share = [math.sqrt(p.noise_bandwidth_hz * ping.step_s / 2.0) for p in model.pulses]
         return ping.noise_sigma[0] * share[0], ping.noise_sigma[1] * share[1]
+
+
+def _interference_flag(explained: Explained) -> PingFlag:
+    return PingFlag.INTERFERENCE if explained.interference else PingFlag.NONE
 
 
 def _envelope(baseband: Baseband, ping: Conditioned, explained: Explained) -> EnvelopeFit:

@@ -8,7 +8,7 @@ import numpy as np
 
 from ..air import speed_of_sound
 from ..types import Detection, DetectionFlag, Ears, FloatArray
-from .bearing import BearingPosterior, bearing_posterior
+from .bearing import BearingPosterior, among_rivals, bearing_posterior
 from .conditioning import Conditioned
 from .config import ProcessingConfig
 from .fit import Explained, range_min
@@ -54,6 +54,8 @@ def _detection(
     covariance = explained.covariance[i]
     fitted_sigma = math.sqrt(max(float(covariance[1, 1]), 1e-12))
     posterior = bearing_posterior(found, bearing_rad, fitted_sigma)
+    if explained.rivals[i]:
+        posterior = among_rivals(explained.rivals[i], fitted_sigma)
     amplitude, snr_db = _per_ear(model, ping, explained, i)
     window = explained.windows[i]
     flags = _flags(ping, window, posterior)

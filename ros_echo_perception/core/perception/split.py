@@ -21,7 +21,7 @@ _MAX_PLACES = 520
 _RANGE_STEPS = 2  # on each side of the centre
 _PHASE_STEPS = 4.0
 _MIN_GAIN = 0.1
-_TRIALS = 4
+_TRIALS = 6
 _OVERLAP_LIMIT = 0.985
 
 
@@ -32,7 +32,7 @@ def best_pairs(
     range_m: float,
     config: ProcessingConfig,
 ) -> list[Objects]:
-    """The most likely pairs of objects near a range, best first, at most four.
+    """The most likely pairs of objects near a range, best first, at most six.
 
     Parameters
     ----------
