@@ -44,7 +44,7 @@ class DetectionScore:
     """Detections against true echoes.
 
     ``must_find`` counts findable true echoes of 15 dB and more, ``found`` those of them that were
-    found; ``n_matched`` counts detections that are any true echo; errors are those of the matched pairs.
+    found; ``n_matched`` counts detections that are any true echo; errors are of matched pairs.
     """
 
     n_detections: int

@@ -60,7 +60,9 @@ class LiveView:
         for what, value in figures_of(monitor):
             table.add_row(what, value)
         bar = ProgressBar(total=self._total_s, completed=min(elapsed_s, self._total_s), width=48)
-        return Group(bar, f"{elapsed_s:.0f} of {self._total_s:g} s", table)
+        progress = Table.grid(padding=(0, 2))
+        progress.add_row(bar, f"{elapsed_s:.0f} of {self._total_s:g} s")
+        return Group(progress, table)
 
 
 def figures_of(monitor: Monitor) -> list[tuple[str, str]]:

@@ -53,8 +53,9 @@ class Timing:
 
 
 def simulated_pings(head: Head, n_echoes: int, n_pings: int) -> list[RawEcho]:
-    """Pings with so many poles in the beam, 0.3 m apart in range, to both sides in turn."""
-    places = [(0.7 + 0.3 * i, 0.25 * (-1) ** i) for i in range(n_echoes)]
+    """Pings with so many poles in the beam, 0.3 m apart in range, none behind another."""
+    bearings = np.linspace(-0.35, 0.35, n_echoes) if n_echoes > 1 else [0.0]
+    places = [(0.7 + 0.3 * i, float(b)) for i, b in enumerate(bearings[:n_echoes])]
     source = bench_source(head, poles(*places), n_pings=n_pings)
     return [source.echo(k) for k in range(n_pings)]
 

@@ -49,8 +49,6 @@ def calibrate_inputs(
     CalibrationError
         When the data cannot determine the values.
     """
-    from ..core.calibration import calibrate_head
-
     sources = [open_input(path) for path in paths]
     if places is not None and len(sources) > 1:
         raise FileFormatError(
@@ -71,6 +69,8 @@ def calibrate_inputs(
             echoes.append(source.echo(k))
             at.append(known[k])
     need_something(len(echoes), "ping with a known place of the pole")
+    from ..core.calibration import calibrate_head
+
     return calibrate_head(echoes, at, nominal)
 
 

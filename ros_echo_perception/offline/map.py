@@ -120,11 +120,15 @@ def save_map(snapshot: MapSnapshot, out: Path) -> None:
     FileFormatError
         For another ending, or when the file cannot be written.
     """
+    _check_ending(out)
     if out.suffix == ".npz":
         save_map_npz(snapshot, out)
-    elif out.suffix in (".yaml", ".yml", ".pgm"):
-        save_map_image(snapshot, out)
     else:
+        save_map_image(snapshot, out)
+
+
+def _check_ending(out: Path) -> None:
+    if out.suffix not in (".npz", ".yaml", ".yml", ".pgm"):
         raise FileFormatError(refuse("--out", str(out), "a name that ends with .npz or .yaml"))
 
 
@@ -186,6 +190,7 @@ def map_command(
       python -m ros_echo_perception map drives/room.wav --head head_a.yaml --out map.npz \\
           --picture map.png
     """
+    _check_ending(out)
     processing = load_settings(config, "processing", ProcessingConfig)
     mapping = load_settings(config, "mapping", MappingConfig)
     source = open_input(recording, topic)

@@ -29,7 +29,8 @@ class EchoGroup(click.Group):
         try:
             return super().invoke(ctx)
         except EchoPerceptionError as error:
-            click.echo(f"error: {error}", err=True)
+            one_line = " ".join(str(error).split())
+            click.echo(f"error: {one_line}", err=True)
             ctx.exit(REFUSED_EXIT_CODE)
 
 
