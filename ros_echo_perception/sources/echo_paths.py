@@ -140,7 +140,8 @@ def _ear(
     source = motion.position(sender.position_m, np.zeros(n))
     wave_number = 2.0 * math.pi * head.carrier_hz / c
     height = sender.position_m[2] - ear.position_m[2]
-    tof = before = np.zeros(n)
+    tof: FloatArray = np.zeros(n)
+    before: FloatArray = tof
     # The receiver's place depends on the time of flight and the other way round.
     for _ in range(2 if motion.moving else 1):
         rays = _rays(world, found, source, motion.position(ear.position_m, tof), wave_number)

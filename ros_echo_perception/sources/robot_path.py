@@ -194,7 +194,7 @@ def drifting_odometry(
     """
     rng = np.random.default_rng([seed, 7])
     times = np.arange(0.0, path.duration_s + 1e-9, 1.0 / rate_hz)
-    true = np.array([path.velocity(t) for t in times])
+    true = np.array([path.velocity(float(t)) for t in times])
     scale, track = 1.0 + error_scale * np.array([0.01, 0.015]) * rng.uniform(-1.0, 1.0, 2)
     noise = error_scale * rng.standard_normal((len(times), 2)) * [0.02, 0.03]
     slip = 1.0 + error_scale * 0.25 * (rng.random(len(times)) < 0.01)
