@@ -68,6 +68,24 @@ class MappingConfig(Settings):
     soft_max_probability: float = setting(
         0.6, "Uncertain echoes from one place raise a cell no further than this", "", 0.5, 0.645
     )
+    alternative_sigma_rad: float = setting(
+        0.02,
+        "Each of several possible bearings of an echo is taken to be this certain (1 sigma)",
+        "rad",
+        0.001,
+        0.5,
+    )
+    bearing_outlier_weight: float = setting(
+        0.2,
+        "Share of echoes heard by both ears whose bearing is wrong by more than its sigma says "
+        "(a wrong carrier cycle, two objects at one range)",
+        "",
+        0.0,
+        0.9,
+    )
+    bearing_outlier_sigma_rad: float = setting(
+        0.2, "How wrong such bearings are (1 sigma)", "rad", 0.01, 1.5
+    )
     confirm_distance_m: float = setting(
         0.15, "Two places of the head count as different from this distance", "m", 0.01, 2.0
     )

@@ -13,6 +13,7 @@ from ..types import Detection, DetectionFlag, Ears, FloatArray
 from .config import MappingConfig
 from .grid import IntArray
 
+_NEGLIGIBLE_WEIGHT = 1e-3
 _DOUBTFUL = DetectionFlag.BEARING_AMBIGUOUS | DetectionFlag.CUES_CONTRADICT
 
 
@@ -113,6 +114,7 @@ def hypotheses_of(
         np.sqrt(table[:, 2] ** 2 + bearing_variance),
     )
     doubtful = np.array([bool(d.flags & _DOUBTFUL) for d in detections], bool)[owner]
+    one_sided = np.array([d.ears is not Ears.BOTH for d in detections], bool)[owner]
     return Hypotheses(
         detection=owner,
         head_x_m=poses[:, 0],
@@ -124,21 +126,34 @@ def hypotheses_of(
         spread_rad=spread,
         weight=table[:, 3],
         uniform=uniform,
-        soft=uniform | doubtful | (spread * ranges > config.soft_lateral_sigma_m),
+        soft=one_sided | doubtful | (spread * ranges > config.soft_lateral_sigma_m),
     )
 
 
 def _bearings(
     detection: Detection, config: MappingConfig
 ) -> list[tuple[float, float, float, float]]:
-    """Bearing, spread, weight and whether uniform (1.0), for each possible bearing."""
+    """Bearing, spread, weight and whether uniform (1.0), for each possible bearing.
+
+    The detection's own sigma counts for its own bearing; where there are alternatives it
+    spans them all and would be far too wide for each of them.
+    """
     weight = detection.existence_probability
     if detection.flags & DetectionFlag.MULTIPATH_SUSPECTED:
         weight *= config.multipath_weight
-    if detection.ears is not Ears.BOTH:
-        low, high = detection.bearing_min_rad, detection.bearing_max_rad
-        return [(0.5 * (low + high), 0.5 * (high - low), weight, 1.0)]
-    sigma = detection.bearing_sigma_rad
-    main = max(0.0, 1.0 - sum(share for _, share in detection.alternatives))
-    bearings = ((detection.bearing_rad, main), *detection.alternatives)
-    return [(bearing, sigma, weight * share, 0.0) for bearing, share in bearings if share > 0.0]
+    main = weight * max(0.0, 1.0 - sum(share for _, share in detection.alternatives))
+    sigma, low, high = (
+        detection.bearing_sigma_rad, detection.bearing_min_rad, detection.bearing_max_rad
+    )  # fmt: skip
+    if detection.ears is Ears.BOTH:
+        doubt = config.bearing_outlier_weight
+        wide = max(sigma, config.bearing_outlier_sigma_rad)
+        bearings = [
+            (detection.bearing_rad, sigma, main * (1.0 - doubt), 0.0),
+            (detection.bearing_rad, wide, main * doubt, 0.0),
+        ]
+    else:
+        bearings = [(0.5 * (low + high), 0.5 * (high - low), main, 1.0)]
+    narrow = min(sigma, config.alternative_sigma_rad)
+    bearings += [(b, narrow, weight * share, 0.0) for b, share in detection.alternatives]
+    return [row for row in bearings if row[2] > _NEGLIGIBLE_WEIGHT] or bearings[:1]
