@@ -69,6 +69,7 @@ class RollingGrid:
         n = width_cells * height_cells
         self.log_odds: GridArray = np.zeros(n, np.float32)
         self.stamp_s: FloatArray = np.full(n, np.nan)
+        self.support: GridArray = np.zeros(n, np.float32)
         self.view_x_m: GridArray = np.full(n, np.nan, np.float32)
         self.view_y_m: GridArray = np.full(n, np.nan, np.float32)
         self.confirmed: NDArray[np.bool_] = np.zeros(n, bool)
@@ -81,6 +82,7 @@ class RollingGrid:
     def _forget(self, cells: slice | IntArray) -> None:
         self.log_odds[cells] = 0.0
         self.stamp_s[cells] = np.nan
+        self.support[cells] = 0.0
         self.view_x_m[cells] = np.nan
         self.view_y_m[cells] = np.nan
         self.confirmed[cells] = False

@@ -68,6 +68,11 @@ class GridUpdater:
         )
         return np.where(cells >= 0, faded, 0.0)
 
+    fs=.1; smax=10.; c=1.0
+    def read_support(self, cells, time_s):
+        g=self.grid
+        return np.where(cells>=0, fade(g.support[cells], time_s-g.stamp_s[cells], self.config.occupied_decay_s, 0.0),0.0)
+
     def apply(
         self, hits: HitEvidence, free: FreeEvidence, head_xy_m: tuple[float, float], time_s: float
     ) -> bool:
@@ -110,6 +115,8 @@ class GridUpdater:
         hit = np.where(confirmed, raised, capped) + np.log1p(config.hit_gain * firm)
         new = np.minimum(hit, prior + config.max_hit_log_odds)
         new = np.clip(new, config.min_log_odds, config.max_log_odds)
+        old = fade(grid.support[cells], time_s - grid.stamp_s[cells], config.occupied_decay_s, 0.0)
+        grid.support[cells] = np.minimum((old + firm + soft) * (1.0 - self.fs * np.where(matters, 0.0, free)), self.smax)
         grid.log_odds[cells] = new
         grid.stamp_s[cells] = time_s
         gone = cells[new <= 0.0]

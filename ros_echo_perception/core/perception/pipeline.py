@@ -33,7 +33,6 @@ class EchoPipeline:
     def __init__(self, head: Head, config: ProcessingConfig | None = None) -> None:
         self.head = head
         self.config = config or ProcessingConfig()
-        self.model_error = float(head.calibration.get("model_error", _NOMINAL_MODEL_ERROR))
 
     def process(self, echo: RawEcho) -> PingResult:
         """All echoes of one ping.
@@ -42,9 +41,9 @@ class EchoPipeline:
         ----------
         echo : any sample rate, carrier below half of it; pulse and geometry follow the head.
         """
-        model = self._model(echo)
+        model = head_model(self.head, echo, self.config)
         baseband = to_baseband(echo, model.receiver)
-        ping = condition(baseband, echo, model, self.model_error)
+        ping = condition(baseband, echo, model, model_error(self.head))
         matched = matched_filter(model, ping, ping.samples)
         candidates = find_candidates(model, ping, matched, self.config.max_bearing_rad)
         fitter = ObjectFitter(model, ping, self.config)
@@ -66,18 +65,6 @@ class EchoPipeline:
     def reset(self) -> None:
         """Forget earlier pings (time jumped, recording looped)."""
 
-    def _model(self, echo: RawEcho) -> HeadModel:
-        temperature = echo.temperature_c
-        if not math.isfinite(temperature):
-            temperature = self.config.default_temperature_c
-        humidity = echo.relative_humidity
-        if not math.isfinite(humidity):
-            humidity = self.config.default_relative_humidity
-        low, high = TEMPERATURE_RANGE_C
-        speed = speed_of_sound(min(max(temperature, low), high), min(max(humidity, 0.0), 1.0))
-        receiver = receiver_filter(self.head, echo.sample_rate_hz, echo.carrier_hz)
-        return HeadModel(self.head, speed, echo.burst_cycles, receiver)
-
     def _burst_flag(self, echo: RawEcho) -> PingFlag:
         known = self.head.calibration.get("burst_cycles")
         if known is None or echo.burst_cycles in known:
@@ -93,6 +80,34 @@ class EchoPipeline:
     def _noise(model: HeadModel, ping: Conditioned) -> tuple[float, float]:
         share = [math.sqrt(p.noise_bandwidth_hz * ping.step_s / 2.0) for p in model.pulses]
         return ping.noise_sigma[0] * share[0], ping.noise_sigma[1] * share[1]
+
+
+def head_model(head: Head, echo: RawEcho, config: ProcessingConfig) -> HeadModel:
+    """The head in the air of one ping; what the echo does not say, the settings say."""
+    temperature = echo.temperature_c
+    if not math.isfinite(temperature):
+        temperature = config.default_temperature_c
+    humidity = echo.relative_humidity
+    if not math.isfinite(humidity):
+        humidity = config.default_relative_humidity
+    low, high = TEMPERATURE_RANGE_C
+    speed = speed_of_sound(min(max(temperature, low), high), min(max(humidity, 0.0), 1.0))
+    receiver = receiver_filter(head, echo.sample_rate_hz, echo.carrier_hz)
+    return HeadModel(head, speed, echo.burst_cycles, receiver)
+
+
+def model_error(head: Head) -> float:
+    """Share of an echo's amplitude that this head's template may miss."""
+    return float(head.calibration.get("model_error", _NOMINAL_MODEL_ERROR))
+
+
+def prepare(
+    head: Head, echo: RawEcho, config: ProcessingConfig | None = None
+) -> tuple[HeadModel, Conditioned]:
+    """The steps before the fit, for tools that look at one ping closely."""
+    model = head_model(head, echo, config or ProcessingConfig())
+    baseband = to_baseband(echo, model.receiver)
+    return model, condition(baseband, echo, model, model_error(head))
 
 
 def _interference_flag(explained: Explained) -> PingFlag:
