@@ -15,22 +15,41 @@ from rclpy.task import Future
 
 from ..core.errors import SourceError
 
-_TIMEOUT_S = 5.0
+Parameters = dict[str, dict[str, Any]]
+"""Values by node and parameter."""
+_TIMEOUT_S = 20.0
 
 
-def read_parameters(node: Node, names: Sequence[str]) -> dict[str, dict[str, Any]]:
-    """All parameters of each named node; ``node`` is spun by another thread.
+class ParameterReader:
+    """Asks nodes for all their parameters, once their services have been discovered.
 
-    Raises
-    ------
-    SourceError
-        When a node does not answer.
+    Parameters
+    ----------
+    node
+        Asks; it is spun by another thread.
+    names
+        Of the nodes.
     """
-    return {name: _read(node, name) for name in names}
+
+    def __init__(self, node: Node, names: Sequence[str]) -> None:
+        self._clients = {name: AsyncParameterClient(node, name) for name in names}
+
+    def ready(self) -> bool:
+        """Whether all nodes can be asked."""
+        return all(client.services_are_ready() for client in self._clients.values())
+
+    def read(self) -> Parameters:
+        """All parameters of all nodes.
+
+        Raises
+        ------
+        SourceError
+            When a node does not answer.
+        """
+        return {name: _read(client, name) for name, client in self._clients.items()}
 
 
-def _read(node: Node, name: str) -> dict[str, Any]:
-    client = AsyncParameterClient(node, name)
+def _read(client: AsyncParameterClient, name: str) -> dict[str, Any]:
     if not client.wait_for_services(_TIMEOUT_S):
         raise SourceError(f"the parameter services of {name} are not there; see its log.")
     listed = _result(client.list_parameters(), name).result.names
@@ -55,7 +74,7 @@ def _plain(value: Any) -> Any:
     return list(value) if value is not None and hasattr(value, "typecode") else value
 
 
-def write_parameters(parameters: dict[str, dict[str, Any]], path: Path) -> None:
+def write_parameters(parameters: Parameters, path: Path) -> None:
     """Write a file that ``--ros-args --params-file`` takes; unset parameters are left out."""
     data = {
         name: {

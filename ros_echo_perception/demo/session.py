@@ -6,7 +6,6 @@ import threading
 import time
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
 
 import rclpy
 from rclpy.executors import ExternalShutdownException, SingleThreadedExecutor
@@ -21,7 +20,7 @@ from ..offline.resources import shipped
 from ..sources.simulator_config import SimulatorConfig
 from .live import LiveView
 from .monitor import Monitor
-from .parameters import read_parameters, write_parameters
+from .parameters import ParameterReader, Parameters, write_parameters
 from .processes import NodeGroup, NodeProcess
 from .recorder import Recorder
 
@@ -80,7 +79,7 @@ class Outcome:
     monitor: Monitor
     first_ping_s: float
     counts: dict[str, int]
-    parameters: dict[str, dict[str, Any]]
+    parameters: Parameters
 
     def simulator(self) -> SimulatorConfig:
         """The settings with which the driver simulated."""
@@ -156,9 +155,7 @@ def run(plan: Plan, console: Console, started_s: float) -> Outcome:
             _wait_for_consumers(recorder, nodes, spinner)
             driver = _start(nodes, "driver", plan)
             first_s = _wait_for_first_ping(monitor, nodes, spinner) - started_s
-            parameters = read_parameters(recorder, NODES)
-            write_parameters(parameters, plan.out / "parameters.yaml")
-            _watch(plan, console, recorder, monitor, nodes, spinner)
+            parameters = _watch(plan, console, recorder, monitor, nodes, spinner)
             driver.stop()
             nodes.forget(driver)
             _linger(nodes, spinner)
@@ -205,20 +202,37 @@ def _wait_for_first_ping(monitor: Monitor, nodes: NodeGroup, spinner: _Spinner) 
 def _watch(
     plan: Plan, console: Console, recorder: Recorder, monitor: Monitor, nodes: NodeGroup,
     spinner: _Spinner,
-) -> None:  # fmt: skip
-    """Show the running table until the time is up or the simulated drive has ended."""
+) -> Parameters:  # fmt: skip
+    """Show the running table until the time is up or the simulated drive has ended.
+
+    Returns
+    -------
+    The parameters of all nodes, written to the output folder as soon as they could be had.
+    """
+    reader = ParameterReader(recorder, NODES)
+    parameters: Parameters = {}
+
+    def note_parameters() -> None:
+        parameters.update(reader.read())
+        write_parameters(parameters, plan.out / "parameters.yaml")
+
     begin = min(monitor.raw_received_s.values())
     with LiveView(console, plan.seconds) as view:
         while (elapsed := time.time() - begin) < plan.seconds:
             nodes.check()
             spinner.check()
+            if not parameters and reader.ready():
+                note_parameters()
             with recorder.lock:
                 view.update(monitor, elapsed)
                 silent_s = time.time() - max(monitor.raw_received_s.values())
             if silent_s > _SILENCE_S:
                 console.print(f"The drive has ended after {elapsed - silent_s:.1f} s.")
-                return
+                break
             time.sleep(_POLL_S)
+    if not parameters:
+        note_parameters()
+    return parameters
 
 
 def _linger(nodes: NodeGroup, spinner: _Spinner) -> None:

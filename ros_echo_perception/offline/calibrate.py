@@ -4,12 +4,13 @@ from __future__ import annotations
 
 import csv
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import click
 
+from ..core.calibration import CalibrationReport, calibrate_head
 from ..core.errors import FileFormatError, refuse
 from ..core.fields import read_text
 from ..core.head import Head, load_head, save_head
@@ -19,11 +20,15 @@ from .heads import head_for
 from .inputs import EchoInput, open_input
 from .options import head_option, need_something, out_option
 
-if TYPE_CHECKING:
-    from ..core.calibration import CalibrationReport
-
 Place = tuple[float, float]
 """Range (m) and bearing (rad) of the pole from the head's reference point."""
+_HOLDBACK = (
+    ("range, mean", "mm", "range_bias_m", 1e3),
+    ("range, rms", "mm", "range_rms_m", 1e3),
+    ("bearing, mean", "deg", "bearing_bias_rad", math.degrees(1.0)),
+    ("bearing, rms", "deg", "bearing_rms_rad", math.degrees(1.0)),
+)
+"""What the report says of the pings held back: words, unit, key, factor to the unit."""
 _COLUMNS = ("ping", "range_m", "bearing_rad")
 
 
@@ -69,8 +74,6 @@ def calibrate_inputs(
             echoes.append(source.echo(k))
             at.append(known[k])
     need_something(len(echoes), "ping with a known place of the pole")
-    from ..core.calibration import calibrate_head
-
     return calibrate_head(echoes, at, nominal)
 
 
@@ -165,14 +168,26 @@ def calibrate_command(
     report = calibrate_inputs(recordings, load_head(head), places)
     out.parent.mkdir(parents=True, exist_ok=True)
     save_head(report.head, out)
-    output().print(
-        table(
-            f"Calibration of {report.head.name}",
-            ("what", "unit", "nominal", "value", "± 1 sigma"),
-            report.rows,
-        )
-    )
-    output().print(
-        table("Checked on pings held back", ("what", "value"), list(report.holdback.items()))
-    )
+    output().print(parameter_table(report))
+    output().print(holdback_table(report.holdback))
     output().print(f"Wrote {out}.", soft_wrap=True)
+
+
+def parameter_table(report: CalibrationReport) -> Any:
+    """Nominal and calibrated values for people."""
+    rows = [
+        (row.name, row.unit, f"{row.nominal:.6g}", f"{row.value:.6g}", f"{row.sigma:.2g}")
+        for row in report.rows
+    ]
+    columns = ("what", "unit", "nominal", "calibrated", "± 1 sigma")
+    return table(f"Calibration of {report.head.name}", columns, rows)
+
+
+def holdback_table(holdback: Mapping[str, float]) -> Any:
+    """Errors on pings that took no part in the fit, nominal beside calibrated."""
+    rows = []
+    for quantity, unit, key, factor in _HOLDBACK:
+        values = (holdback[f"{head}_{key}"] * factor for head in ("nominal", "calibrated"))
+        rows.append((quantity, unit, *values))
+    title = f"Checked on {holdback['pings']:.0f} pings held back"
+    return table(title, ("error", "unit", "nominal head", "calibrated head"), rows)
