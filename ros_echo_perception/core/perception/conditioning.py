@@ -10,16 +10,13 @@ from scipy.ndimage import binary_dilation, maximum_filter1d
 
 from ..types import ComplexArray, FloatArray, FrontEndFlag, PingFlag, RawEcho
 from .baseband import Baseband
+from .direct import direct_pulse
 from .model import HeadModel
 from .pulse import PulseTemplate
 
 _NOISE_QUANTILE = 0.35
-_DIRECT_SEARCH_S = 0.6e-3
 _DIRECT_HEARD_S = 2.5e-3
 """Noise is measured after the direct pulse where the record is long enough."""
-_DIRECT_MODEL_ERROR = 0.3
-"""The direct pulse takes paths that the template does not know (head body, mounting)."""
-_TAIL_STEPS = 24
 _CLIP_ERROR = 0.1
 _CLIP_REACH_S = 0.5e-3
 """Near clipped samples the flanks are distorted by what the converter cut off, by about this
@@ -82,21 +79,20 @@ def condition(
         if not alive[ear]:
             continue
         profile = noise[ear] * _noise_profile(baseband)
-        direct, covered_s = direct_pulse(
-            baseband, ear, model.pulses[ear], model.head.latency_s, noise[ear]
+        direct = direct_pulse(
+            model.head, baseband, ear, model.pulses[ear], echo.burst_cycles, noise[ear]
         )
-        samples[ear] -= direct
+        samples[ear] -= direct.samples
         strong = maximum_filter1d(np.abs(samples[ear]), 3)
         variance[ear] = (
             profile**2
-            + (_DIRECT_MODEL_ERROR * np.abs(direct)) ** 2
+            + direct.error**2
             + (model_error * strong) ** 2
             + (_CLIP_ERROR * binary_dilation(baseband.clipped[ear], iterations=reach)) ** 2
         )
-        covered_s = _decayed(baseband, ear, covered_s, noise[ear])
-        known = ~baseband.clipped[ear] & (baseband.time_s > covered_s)
+        known = ~baseband.clipped[ear] & (baseband.time_s > direct.covered_s)
         weight[ear] = np.where(known, 1.0 / np.sqrt(variance[ear]), 0.0)
-        blanking_end = max(blanking_end, covered_s)
+        blanking_end = max(blanking_end, direct.covered_s)
     return Conditioned(
         samples=samples,
         weight=weight,
@@ -142,46 +138,6 @@ def _noise_profile(baseband: Baseband) -> FloatArray:
         level.append(math.sqrt(float(np.quantile(power, _NOISE_QUANTILE, axis=1).mean())))
     profile = np.interp(baseband.time_s, centre, level)
     return np.asarray(profile / np.median(level))
-
-
-def direct_pulse(
-    baseband: Baseband, ear: int, pulse: PulseTemplate, latency_s: float, noise: float
-) -> tuple[ComplexArray, float]:
-    """The pulse that runs straight from the transmitter to an ear.
-
-    Returns
-    -------
-    Fitted direct pulse, shape (n,), and the time up to which it hides everything (its body;
-    0 when the record starts later).
-    """
-    time = baseband.time_s
-    window = (time > -0.2e-3) & (time < latency_s + _DIRECT_SEARCH_S + pulse.peak_time_s)
-    nothing = np.zeros(time.size, complex), 0.0
-    if not window.any() or float(np.abs(baseband.samples[ear, window]).max()) < 6.0 * noise:
-        return nothing
-    usable = window & ~baseband.clipped[ear]
-    delays = latency_s + np.arange(0.0, _DIRECT_SEARCH_S, baseband.step_s / 4.0)
-    shapes = pulse.evaluate(time[None, :] - delays[:, None])[0]  # (delays, n)
-    part = shapes[:, usable]
-    energy = np.sum(np.abs(part) ** 2, axis=1)
-    match = part.conj() @ baseband.samples[ear, usable]
-    gain = np.where(energy > 0, np.abs(match) ** 2 / np.maximum(energy, 1e-30), 0.0)
-    best = int(np.argmax(gain))
-    amplitude = match[best] / max(energy[best], 1e-30)
-    body_s = delays[best] + pulse.peak_time_s + 2.0 * pulse.envelope_sigma_s
-    return amplitude * shapes[best], float(body_s)
-
-
-def _decayed(baseband: Baseband, ear: int, from_s: float, noise: float) -> float:
-    """When the direct pulse has sunk into noise, or a nearer echo rises out of its tail."""
-    if from_s <= 0.0:
-        return 0.0
-    envelope = np.abs(baseband.samples[ear])
-    first = int(np.searchsorted(baseband.time_s, from_s))
-    for k in range(first, min(first + _TAIL_STEPS, envelope.size - 2)):
-        if envelope[k] < 2.5 * noise or envelope[k + 2] > 1.3 * envelope[k]:
-            return float(baseband.time_s[k])
-    return float(baseband.time_s[min(first + _TAIL_STEPS, envelope.size - 1)])
 
 
 def _alive(baseband: Baseband, echo: RawEcho, noise: list[float]) -> tuple[bool, bool]:

@@ -18,6 +18,7 @@ from .report import report_detections
 from .search import matched_filter
 from .seeds import find_candidates
 
+_OTHER_BURST_ERROR = 0.04
 _NOMINAL_MODEL_ERROR = 0.05
 """Share of an echo's amplitude that the template of an uncalibrated head may miss."""
 
@@ -43,7 +44,7 @@ class EchoPipeline:
         """
         model = head_model(self.head, echo, self.config)
         baseband = to_baseband(echo, model.receiver)
-        ping = condition(baseband, echo, model, model_error(self.head))
+        ping = condition(baseband, echo, model, model_error(self.head, echo.burst_cycles))
         matched = matched_filter(model, ping, ping.samples)
         candidates = find_candidates(model, ping, matched, self.config.max_bearing_rad)
         fitter = ObjectFitter(model, ping, self.config)
@@ -58,18 +59,12 @@ class EchoPipeline:
             range_max_m=self._range_max(model, echo),
             beam_half_width_rad=self.head.transmitter.half_power_beam_width_rad / 2.0,
             noise=self._noise(model, ping),
-            flags=ping.flags | self._burst_flag(echo) | _interference_flag(explained),
+            flags=ping.flags | _more_flags(self.head, echo, explained),
             envelope=_envelope(baseband, ping, explained),
         )
 
     def reset(self) -> None:
         """Forget earlier pings (time jumped, recording looped)."""
-
-    def _burst_flag(self, echo: RawEcho) -> PingFlag:
-        known = self.head.calibration.get("burst_cycles")
-        if known is None or echo.burst_cycles in known:
-            return PingFlag.NONE
-        return PingFlag.BURST_UNCALIBRATED
 
     def _range_max(self, model: HeadModel, echo: RawEcho) -> float:
         # The echo's body must lie inside the record.
@@ -96,9 +91,14 @@ def head_model(head: Head, echo: RawEcho, config: ProcessingConfig) -> HeadModel
     return HeadModel(head, speed, echo.burst_cycles, receiver)
 
 
-def model_error(head: Head) -> float:
+def model_error(head: Head, burst_cycles: float) -> float:
     """Share of an echo's amplitude that this head's template may miss."""
-    return float(head.calibration.get("model_error", _NOMINAL_MODEL_ERROR))
+    known = float(head.calibration.get("model_error", _NOMINAL_MODEL_ERROR))
+    return known if _burst_is_calibrated(head, burst_cycles) else max(known, _OTHER_BURST_ERROR)
+
+
+def _burst_is_calibrated(head: Head, burst_cycles: float) -> bool:
+    return burst_cycles in head.calibration.get("burst_cycles", [burst_cycles])
 
 
 def prepare(
@@ -107,11 +107,14 @@ def prepare(
     """The steps before the fit, for tools that look at one ping closely."""
     model = head_model(head, echo, config or ProcessingConfig())
     baseband = to_baseband(echo, model.receiver)
-    return model, condition(baseband, echo, model, model_error(head))
+    return model, condition(baseband, echo, model, model_error(head, echo.burst_cycles))
 
 
-def _interference_flag(explained: Explained) -> PingFlag:
-    return PingFlag.INTERFERENCE if explained.interference else PingFlag.NONE
+def _more_flags(head: Head, echo: RawEcho, explained: Explained) -> PingFlag:
+    flags = PingFlag.INTERFERENCE if explained.interference else PingFlag.NONE
+    if not _burst_is_calibrated(head, echo.burst_cycles):
+        flags |= PingFlag.BURST_UNCALIBRATED
+    return flags
 
 
 def _envelope(baseband: Baseband, ping: Conditioned, explained: Explained) -> EnvelopeFit:
