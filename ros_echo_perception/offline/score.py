@@ -94,8 +94,9 @@ def score_all(data: DataSet, work: Path, use_nominal: bool = False) -> dict[str,
     with ProcessPoolExecutor(WORKERS) as pool, progress_bar() as progress:
         task = progress.add_task("score", total=None)
         heads = _calibrated(data, scenes, work, pool, use_nominal)
-        jobs = [pool.submit(_detect_job, r.path, heads[r.unit]) for r in scenes]
+        # The long jobs first: so both processes are busy to the end.
         maps = [pool.submit(_map_job, r.path, heads[r.unit], work) for r in drives]
+        jobs = [pool.submit(_detect_job, r.path, heads[r.unit]) for r in scenes]
         progress.update(task, total=len(jobs) + len(maps))
         waiting: list[Future[Any]] = [*jobs, *maps]
         for job in waiting:
