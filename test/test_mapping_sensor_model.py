@@ -1,6 +1,7 @@
 """What one echo says of which cells."""
 
 import math
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -9,18 +10,19 @@ from matplotlib.path import Path as Polygon
 from scipy.stats import norm
 
 from ros_echo_perception.core.mapping import MappingConfig
+from ros_echo_perception.core.mapping.evidence import prior_of
 from ros_echo_perception.core.mapping.grid import RollingGrid
 from ros_echo_perception.core.mapping.hypotheses import hypotheses_of, is_valid
 from ros_echo_perception.core.mapping.sensor_model import (
     arc_samples,
     clear_view,
     path_samples,
-    share_by_odds,
+    share,
     silent_samples,
 )
 from ros_echo_perception.core.types import DetectionFlag, Pose2
 
-CONFIG = MappingConfig()
+CONFIG = MappingConfig(bearing_outlier_weight=0.0)
 NO_GROWTH = (0.0, 0.0, 0.0)
 
 
@@ -73,13 +75,33 @@ def test_masses_add_up_to_the_existence_probability():
     np.testing.assert_allclose(total, [0.7, 0.99, 0.99], rtol=1e-9)
 
 
-def test_alternatives_share_by_weight():
-    echo = detection(2.0, 0.0, alternatives=((0.5, 0.3), (-0.5, 0.2)), existence_probability=1.0)
+def test_alternatives_share_by_weight_and_are_narrow():
+    echo = detection(
+        2.0,
+        0.1,
+        0.3,
+        alternatives=((0.9, 0.5), (0.4, 0.3), (-0.5, 0.2)),
+        existence_probability=1.0,
+    )
     samples = arc_samples(possible(echo), 0.05)
     angle = np.arctan2(samples.y_m, samples.x_m)
-    for bearing, weight in ((0.0, 0.5), (0.5, 0.3), (-0.5, 0.2)):
-        near = np.abs(angle - bearing) < 0.1
+    for bearing, weight in ((0.9, 0.5), (0.4, 0.3), (-0.5, 0.2)):
+        near = np.abs(angle - bearing) < 3 * CONFIG.alternative_sigma_rad
         assert samples.weight[near].sum() == pytest.approx(weight)
+
+
+def test_what_alternatives_leave_is_for_the_bearing_itself():
+    echo = detection(2.0, 0.1, 0.02, alternatives=((0.9, 0.25),), existence_probability=1.0)
+    hypotheses = possible(echo)
+    assert hypotheses.bearing_rad.tolist() == [0.1, 0.9]
+    assert hypotheses.weight.tolist() == pytest.approx([0.75, 0.25])
+
+
+def test_expected_outliers_take_their_share_and_lie_widely():
+    config = replace(CONFIG, bearing_outlier_weight=0.3, bearing_outlier_sigma_rad=0.25)
+    hypotheses = possible(detection(2.0, 0.1, existence_probability=1.0), config=config)
+    assert hypotheses.weight.tolist() == pytest.approx([0.7, 0.3])
+    assert hypotheses.spread_rad.tolist() == pytest.approx([0.01, 0.25])
 
 
 def test_one_sided_echo_fills_its_interval_evenly_and_thinly():
@@ -139,18 +161,28 @@ def test_senseless_detections_are_recognised(broken):
 
 # ---------------------------------------------------------------------- sharing
 def test_sharing_is_the_posterior_of_exactly_one_cause():
-    """Two cells with equal mass 1/2 and occupancy 0.8 and 0.2: given that exactly one of them
-    is the cause, 0.8 * 0.8 : 0.2 * 0.2 = 16 : 1 (Bayes, by hand)."""
+    """Equal masses, priors 4 to 1: posterior 0.8 and 0.2 (Bayes, by hand)."""
     hypotheses = possible(detection(1.0, 0.0, existence_probability=1.0))
     samples = arc_samples(hypotheses, 0.05)
-    left = samples.y_m > 1e-12
-    log_odds = np.where(left, math.log(4.0), -math.log(4.0))
-    shared = share_by_odds(samples, hypotheses, log_odds)
-    ratio = (shared[left].sum() / samples.weight[left].sum()) / (
-        shared[~left].sum() / samples.weight[~left].sum()
-    )
-    assert ratio == pytest.approx(16.0)
-    assert shared.sum() == pytest.approx(1.0)
+    left, right = samples.y_m > 1e-12, samples.y_m < -1e-12
+    prior = np.where(left, 4.0, np.where(right, 1.0, 0.0))
+    shared = share(samples, hypotheses, prior)
+    assert [shared[left].sum(), shared[right].sum()] == pytest.approx([0.8, 0.2], rel=1e-3)
+
+
+def test_prior_grows_with_what_was_explained_and_falls_where_sound_passed():
+    echoes = [detection(1.0, 0.0), detection(2.0, 0.0, flags=AMBIGUOUS)]
+    config = CONFIG
+    hypotheses = possible(*echoes, config=config)
+    samples = arc_samples(hypotheses, 0.05)
+    first = np.array([np.argmax(samples.owner == 0), np.argmax(samples.owner == 1)])
+    flat = np.zeros(samples.owner.size)
+    new = prior_of(hypotheses, samples, flat, flat, config)[first]
+    known = prior_of(hypotheses, samples, flat, flat + 2.0, config)[first]
+    crossed = prior_of(hypotheses, samples, flat - 1.0, flat, config)[first]
+    assert new.tolist() == [config.certain_novelty, config.doubtful_novelty]
+    assert (known - new).tolist() == pytest.approx([2.0, 2.0])
+    assert crossed / new == pytest.approx([math.exp(-1.0)] * 2)
 
 
 # ---------------------------------------------------------------------- free paths

@@ -26,7 +26,7 @@ class MappingConfig(Settings):
         0.5, "Echoes less likely than this are not used", "", 0.0, 1.0
     )
     hit_gain: float = setting(
-        1.3,
+        1.5,
         "Likelihood ratio gained by a cell that alone can explain an echo; cells that share it "
         "gain in proportion",
         "",
@@ -34,7 +34,7 @@ class MappingConfig(Settings):
         100.0,
     )
     surface_width_m: float = setting(
-        0.05,
+        0.08,
         "What reflects is a piece of surface of about this size (1 sigma across the line of "
         "sight), so that neighbouring echoes of a wall support each other",
         "m",
@@ -69,11 +69,22 @@ class MappingConfig(Settings):
         0.6, "Uncertain echoes from one place raise a cell no further than this", "", 0.5, 0.645
     )
     alternative_sigma_rad: float = setting(
-        0.02,
+        0.03,
         "Each of several possible bearings of an echo is taken to be this certain (1 sigma)",
         "rad",
         0.001,
         0.5,
+    )
+    doubtful_novelty: float = setting(
+        0.01,
+        "Where an uncertain echo may come from, a place never heard before counts as much as one "
+        "that has explained this many echoes; small: known places explain nearly all",
+        "",
+        1e-4,
+        100.0,
+    )
+    certain_novelty: float = setting(
+        1.0, "The same for echoes whose bearing is certain", "", 1e-4, 100.0
     )
     bearing_outlier_weight: float = setting(
         0.2,

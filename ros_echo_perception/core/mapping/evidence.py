@@ -67,17 +67,24 @@ def free_paths(
     return paths, grid.locate(paths.samples.x_m, paths.samples.y_m)
 
 
-HALF=1.0
+def prior_of(
+    possible: Hypotheses,
+    arcs: Samples,
+    log_odds: FloatArray,
+    support: FloatArray,
+    config: MappingConfig,
+) -> FloatArray:
+    """Prior weight of each point as the cause of its echo."""
+    novelty = np.where(possible.soft, config.doubtful_novelty, config.certain_novelty)
+    return np.asarray(np.exp(np.minimum(log_odds, 0.0)) * (support + novelty[arcs.owner]))
+
+
 def hit_evidence(
-    possible: Hypotheses, arcs: Samples, cells: IntArray, mass: FloatArray, clear: FloatArray, decide=.5
+    possible: Hypotheses, arcs: Samples, cells: IntArray, mass: FloatArray, clear: FloatArray
 ) -> HitEvidence:
     """Masses by cell, less where the view is blocked, split into firm and soft."""
     seen = mass * clear[arcs.owner]
-    n=len(possible)
-    tot=np.bincount(possible.detection, possible.weight); sh=np.bincount(arcs.owner, mass, n)/np.maximum(tot[possible.detection],1e-9)
-    undecided = possible.soft & (sh<decide)
     soft = possible.soft[arcs.owner]
-    seen = np.where(undecided[arcs.owner], seen*HALF, seen)
     return HitEvidence(cells, np.where(soft, 0.0, seen), np.where(soft, seen, 0.0))
 
 

@@ -55,6 +55,8 @@ class RollingGrid:
         float32, 0 where nothing is known.
     stamp_s
         float64 time of the last evidence, NaN where there is none.
+    support
+        float32 number of echoes that the cell has explained so far.
     view_x_m, view_y_m
         float32 place of the head that first found the cell occupied, NaN where none did.
     confirmed
@@ -168,9 +170,9 @@ def fade(
     rate_free = 1.0 / free_decay_s if free_decay_s > 0.0 else 0.0
     if rate_occupied == 0.0 and rate_free == 0.0:
         return log_odds
-    age = np.maximum(np.nan_to_num(age_s), 0.0)
-    rate = np.where(log_odds > 0.0, rate_occupied, rate_free)
-    return np.asarray(log_odds * np.exp(-age * rate), np.float32)
+    age = np.fmax(age_s, 0.0)  # 0 where there is no evidence (NaN)
+    rate = np.where(log_odds > 0.0, -rate_occupied, -rate_free)
+    return np.asarray(log_odds * np.exp(age * rate), np.float32)
 
 
 def _incoming(first: int, shift: int, size: int) -> IntArray:

@@ -18,13 +18,14 @@ from .evidence import (
     free_paths,
     head_poses,
     hit_evidence,
+    prior_of,
     with_silence,
 )
 from .grid import MapSnapshot, RollingGrid
 from .hypotheses import hypotheses_of, is_valid
 from .pending import PendingPings, WaitingPing
 from .poses import PoseBuffer, PoseOutcome
-from .sensor_model import clear_view, share_by_odds
+from .sensor_model import clear_view, share
 from .update import GridUpdater
 
 
@@ -165,7 +166,6 @@ class LocalMapper:
         while self._pending.pop_expired(now_s, self.config.max_pose_wait_s):
             self.counts[MapOutcome.SKIPPED_NO_ODOMETRY.value] += 1
 
-    eps=.3; decide=.5
     # ------------------------------------------------------------------ the algorithm
     def _fuse(self, ping: WaitingPing) -> MapOutcome:
         config, result, time_s = self.config, ping.result, ping.emission_time_s
@@ -181,8 +181,10 @@ class LocalMapper:
         paths, path_cells = free_paths(possible, self.grid, result.range_min_m, config)
         clear = clear_view(possible, paths, self._updater.read(path_cells, time_s))
         arcs, arc_cells = arcs_of(possible, self.grid, config)
-        mass = share_by_odds(arcs, possible, np.minimum(self._updater.read(arc_cells, time_s),0) + np.log(1e-9+self.eps+self._updater.read_support(arc_cells, time_s)))
-        hits = hit_evidence(possible, arcs, arc_cells, mass, clear, self.decide)
+        known = self._updater.read(arc_cells, time_s)
+        support = self._updater.read_support(arc_cells, time_s)
+        mass = share(arcs, possible, prior_of(possible, arcs, known, support, config))
+        hits = hit_evidence(possible, arcs, arc_cells, mass, clear)
         free = free_evidence(paths, path_cells, clear)
         if config.silence_policy == CLEAR_TO_RANGE:
             free = with_silence(free, self.grid, emission, result, detections, config)

@@ -6,9 +6,11 @@ masses of a detection add up to its existence probability. A cell's likelihood r
 ``1 + hit_gain * mass``: certain bearings raise few cells much, arcs raise many cells little.
 
 Sharing. Given what the map knows, the cells do not compete on equal terms: if exactly one of
-them is the cause, its posterior is proportional to mass times prior odds. So an echo that an
-occupied cell explains adds little to the rest of its arc (the remedy of [1]_ for cells
-updated independently, here one ping at a time).
+them is the cause, its posterior is proportional to mass times prior. The prior of a cell grows
+with the number of echoes that it has explained and falls where sound has passed. So an echo
+that a known place explains adds little to the rest of its arc, and of several possible
+bearings the one wins on which pings from different places agree. This is one step of
+expectation-maximisation per ping, after the forward models of [1]_.
 
 Free. A received echo proves that sound travelled to the reflector and back along its bearing:
 the cells on that path, and only those, are lowered, by the probability that the path really
@@ -37,6 +39,7 @@ from .grid import GridArray, IntArray
 from .hypotheses import Hypotheses
 
 _SPAN_SIGMAS = 2.5
+_GOLDEN_SECTION = 0.618034
 _MAX_ARC_SAMPLES = 1023
 _MIN_RANGE_SIGMA_CELLS = 0.25
 _MARGIN_CELLS = 1.5
@@ -65,18 +68,21 @@ class Paths:
 def arc_samples(
     hypotheses: Hypotheses, resolution_m: float, surface_width_m: float = 0.0
 ) -> Samples:
-    """Points over each hypothesis, no more than half a cell apart across the line of sight and a
-    quarter along it, weights adding up to its weight."""
+    """Points over each hypothesis, weights adding up to its weight.
+
+    They lie closer than the cells, and each row is shifted against the one before by the
+    golden section, so that no row of points falls on one side of a border of cells as a whole.
+    """
     h = hypotheses
     range_sigma = np.hypot(h.range_sigma_m, _MIN_RANGE_SIGMA_CELLS * resolution_m)
     range_span = _SPAN_SIGMAS * range_sigma
     spread = np.hypot(h.spread_rad, surface_width_m / h.range_m)
     bearing_span = np.where(h.uniform, h.spread_rad, _SPAN_SIGMAS * spread)
-    n_range = _count(2.0 * range_span, 0.25 * resolution_m, 5)
-    n_bearing = _count(2.0 * bearing_span * h.range_m, 0.5 * resolution_m, 11)
+    n_range = _count(2.0 * range_span, 0.4 * resolution_m, 5)
+    n_bearing = _count(2.0 * bearing_span * h.range_m, 0.7 * resolution_m, 11)
     owner, k = _ragged(n_range * n_bearing)
     across, along = k % n_bearing[owner], k // n_bearing[owner]
-    u = -1.0 + 2.0 * along / (n_range[owner] - 1)
+    u = -1.0 + 2.0 * (along + (across * _GOLDEN_SECTION) % 1.0) / n_range[owner]
     v = -1.0 + 2.0 * across / (n_bearing[owner] - 1)
     exponent = u**2 + np.where(h.uniform[owner], 0.0, v**2)
     density = np.exp(-0.5 * _SPAN_SIGMAS**2 * exponent)
@@ -142,15 +148,14 @@ def clear_view(
     return clear
 
 
-def share_by_odds(
-    samples: Samples, hypotheses: Hypotheses, log_odds: FloatArray | GridArray
-) -> FloatArray:
-    """Weights of the samples after competition by prior odds within each detection."""
-    odds = np.exp(log_odds)
+def share(samples: Samples, hypotheses: Hypotheses, prior: FloatArray | GridArray) -> FloatArray:
+    """Weights of the samples after competition within each detection: mass times prior,
+    scaled back to the detection's whole mass.
+    """
     group = hypotheses.detection[samples.owner]
     size = int(hypotheses.detection[-1]) + 1 if len(hypotheses) else 0
     before = np.bincount(group, samples.weight, size)
-    raised = samples.weight * odds
+    raised = samples.weight * prior
     after = np.bincount(group, raised, size)
     scale = np.divide(before, after, out=np.zeros(size), where=after > 0.0)
     return np.asarray(raised * scale[group])

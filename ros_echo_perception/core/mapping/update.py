@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from ..types import FloatArray
 from .config import MappingConfig
-from .grid import IntArray, RollingGrid, fade
+from .grid import GridArray, IntArray, RollingGrid, fade
 
 
 @dataclass(frozen=True)
@@ -46,6 +46,9 @@ class FreeEvidence:
 
 _MATTERS = 0.02
 """Mass from which an echo counts as speaking for a cell."""
+_CLEARS_SUPPORT = 0.3
+"""Share of its support that a cell loses when the sound surely crossed it."""
+_MAX_SUPPORT = 10.0
 
 
 class GridUpdater:
@@ -59,19 +62,20 @@ class GridUpdater:
 
     def read(self, cells: IntArray, time_s: float) -> FloatArray:
         """Faded log-odds of cells at a time; 0 for cell -1 (outside the window)."""
-        grid, config = self.grid, self.config
-        faded = fade(
-            grid.log_odds[cells],
-            time_s - grid.stamp_s[cells],
-            config.occupied_decay_s,
-            config.free_decay_s,
+        config = self.config
+        return self._read(
+            self.grid.log_odds, cells, time_s, config.occupied_decay_s, config.free_decay_s
         )
-        return np.where(cells >= 0, faded, 0.0)
 
-    fs=.1; smax=10.; c=1.0
-    def read_support(self, cells, time_s):
-        g=self.grid
-        return np.where(cells>=0, fade(g.support[cells], time_s-g.stamp_s[cells], self.config.occupied_decay_s, 0.0),0.0)
+    def read_support(self, cells: IntArray, time_s: float) -> FloatArray:
+        """Faded support of cells at a time; 0 for cell -1 (outside the window)."""
+        return self._read(self.grid.support, cells, time_s, self.config.occupied_decay_s, 0.0)
+
+    def _read(
+        self, layer: GridArray, cells: IntArray, time_s: float, decay_s: float, free_decay_s: float
+    ) -> FloatArray:
+        age_s = time_s - self.grid.stamp_s[cells]
+        return np.where(cells >= 0, fade(layer[cells], age_s, decay_s, free_decay_s), 0.0)
 
     def apply(
         self, hits: HitEvidence, free: FreeEvidence, head_xy_m: tuple[float, float], time_s: float
@@ -115,8 +119,9 @@ class GridUpdater:
         hit = np.where(confirmed, raised, capped) + np.log1p(config.hit_gain * firm)
         new = np.minimum(hit, prior + config.max_hit_log_odds)
         new = np.clip(new, config.min_log_odds, config.max_log_odds)
-        old = fade(grid.support[cells], time_s - grid.stamp_s[cells], config.occupied_decay_s, 0.0)
-        grid.support[cells] = np.minimum((old + firm + soft) * (1.0 - self.fs * np.where(matters, 0.0, free)), self.smax)
+        support = self.read_support(cells, time_s) + firm + soft
+        support *= 1.0 - _CLEARS_SUPPORT * np.where(matters, 0.0, free)
+        grid.support[cells] = np.minimum(support, _MAX_SUPPORT)
         grid.log_odds[cells] = new
         grid.stamp_s[cells] = time_s
         gone = cells[new <= 0.0]
