@@ -15,8 +15,9 @@ from ..errors import CalibrationError, refuse
 from ..head import Head
 from ..perception.baseband import receiver_filter
 from ..perception.config import ProcessingConfig
-from ..perception.joint import Priors, one_object, refine, window_of
+from ..perception.joint import Priors, refine, window_of
 from ..perception.model import HeadModel
+from ..perception.objects import one_object
 from ..perception.pipeline import prepare
 from ..types import FloatArray, RawEcho
 from .direct import measure_direct_pulse

@@ -11,8 +11,9 @@ from ..air import speed_of_sound
 from ..head import Head
 from ..perception.baseband import Baseband, ReceiverFilter, receiver_filter, to_baseband
 from ..perception.conditioning import noise_sigma
-from ..perception.joint import one_object, signals
+from ..perception.joint import signals
 from ..perception.model import HeadModel
+from ..perception.objects import one_object
 from ..types import ComplexArray, FloatArray, RawEcho
 
 _BEFORE_S, _AFTER_S = 0.5e-3, 1.9e-3

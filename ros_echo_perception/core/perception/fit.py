@@ -3,18 +3,19 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 
 import numpy as np
 from scipy.optimize import brentq
 
-from ..types import ComplexArray, FloatArray
+from ..types import FloatArray
 from .conditioning import Conditioned
 from .config import ProcessingConfig
-from .joint import Objects, Priors, Refined, no_objects, one_object, refine, signals, window_of
 from .interference import find_click, is_click
+from .joint import Priors, Refined
 from .model import HeadModel
+from .objects import Objects, one_object
 from .pairing import Candidate
+from .scene import Explained, Rivals, Scene
 from .search import bearing_grid, matched_filter, scan
 from .split import best_pairs
 
@@ -26,7 +27,7 @@ _RIVAL_NATS = 4.0
 _EXTRA_ROUNDS = 12
 _MISFIT_SHARE = 0.7
 """A pair must gain a threshold; one object that leaves much less than that needs no look."""
-_MAX_SPLITS = 3
+_MAX_LOOKS = 3
 _SURE_FACTOR = 6.0
 """An object whose linearised loss is this many thresholds needs no refit without it."""
 
@@ -45,52 +46,17 @@ def gain_threshold(model: HeadModel, ping: Conditioned, false_detections_per_pin
     tries = max(1.0, 2.0 * duration_s * model.pulses[0].noise_bandwidth_hz)
     level = math.log(min(false_detections_per_ping / tries, 0.5))
     both = ping.alive[0] and ping.alive[1]
-    extra = (lambda x: math.log1p(x)) if both else (lambda x: 0.0)
-    return float(brentq(lambda x: extra(x) - x - level, 0.0, 60.0))
+
+    def excess(x: float) -> float:
+        return (math.log1p(x) if both else 0.0) - x - level
+
+    return float(brentq(excess, 0.0, 60.0))
 
 
 def range_min(model: HeadModel, ping: Conditioned) -> float:
     """Nearest range whose echo peaks after the direct pulse has ended, m."""
     first_peak_s = ping.blanking_end_s - model.pulses[0].peak_time_s
     return model.range_of_delay(max(first_peak_s, 0.0))
-
-
-Rivals = tuple[tuple[float, float], ...]
-"""Bearings with their weights."""
-
-
-@dataclass(frozen=True, eq=False)
-class Explained:
-    """The objects that explain a ping.
-
-    Attributes
-    ----------
-    gain
-        shape (k,): nats that the ping's likelihood loses without the object.
-    covariance
-        shape (k, 3, 3) of (range, bearing, velocity) at the fitted place.
-    sounds
-        What each object puts into the ears, complex (2, window).
-    residual
-        complex, shape (2, n): samples less all objects.
-    """
-
-    objects: Objects
-    gain: FloatArray
-    covariance: FloatArray
-    windows: list[slice]
-    sounds: list[ComplexArray]
-    residual: ComplexArray
-    threshold: float
-    rivals: list[Rivals]
-    """For each object: bearings with weights of equally likely pairs; empty if there are none."""
-    interference: bool
-
-    def alone(self, i: int) -> ComplexArray:
-        """Samples (2, n) with all objects but one taken off."""
-        samples = self.residual.copy()
-        samples[:, self.windows[i]] += self.sounds[i]
-        return samples
 
 
 class ObjectFitter:
@@ -102,59 +68,71 @@ class ObjectFitter:
         self.config = config
         self.threshold = gain_threshold(model, ping, config.false_detections_per_ping)
         self.bearings = bearing_grid(model, config.max_bearing_rad)
-        self.priors = Priors(config.velocity_sigma_m_s, config.max_bearing_rad)
-        self.objects = no_objects()
-        self.windows: list[slice] = []
-        self.sounds: list[ComplexArray] = []
-        self.residual = ping.samples.copy()
         self.range_min_m = range_min(model, ping)
+        self.scene = Scene(model, ping, Priors(config.velocity_sigma_m_s, config.max_bearing_rad))
         self.interference = False
-        self.rivals: list[Rivals] = []
+        self._reach_m = model.speed_m_s * model.pulses[0].envelope_sigma_s
 
     def fit(self, candidates: list[Candidate]) -> Explained:
         """Objects from candidates and from what the residual still shows."""
         for candidate in candidates:
-            if len(self.objects) >= self.config.max_echoes:
-                break
             self._try_add(candidate.mean_delay_s)
         self._split_misfits()
         self._add_from_residual()
         self._search_again()
-        self._merge_close()
+        self._reconsider_close()
         return self._drop_weak()
 
     # ------------------------------------------------------------------ steps of fit()
 
-    def _try_add(self, delay_s: float) -> bool:
+    def _try_add(self, delay_s: float) -> None:
+        """Add an object near a delay, unless noise or a click explains what is there."""
         range_m = self.model.range_of_delay(delay_s)
+        if len(self.scene) >= self.config.max_echoes:
+            return
         if not self.range_min_m < range_m < self.config.max_range_m:
-            return False
+            return
         width = _SEED_HALF_WIDTH_M + 0.25 * self.model.head.baseline_m
-        found = scan(self.model, self.ping, self.residual, range_m, width, self.bearings)
+        residual = self.scene.residual
+        found = scan(self.model, self.ping, residual, range_m, width, self.bearings)
         best_range, best_bearing, strength, gain = found.best()
-        if gain < self.threshold:
-            return False
+        if gain < self.threshold or self._take_off_click(delay_s, gain):
+            return
+        self.scene.append(one_object(best_range, best_bearing, strength))
+        self.scene.settle(self.scene.cluster(len(self.scene) - 1))
+
+    def _take_off_click(self, delay_s: float, object_gain: float) -> bool:
+        peak_s = delay_s + self.model.pulses[0].peak_time_s
         click = find_click(
-            self.model.head,
-            self.model.receiver,
-            self.ping,
-            self.residual,
-            delay_s + self.model.pulses[0].peak_time_s,
+            self.model.head, self.model.receiver, self.ping, self.scene.residual, peak_s
         )
-        if is_click(click, gain, _CLICK_NATS):
-            self.residual[:, click.window] -= click.sound
-            self.interference = True
+        if not is_click(click, object_gain, _CLICK_NATS):
             return False
-        self._append(one_object(best_range, best_bearing, strength))
-        self._replace(self._cluster(len(self.objects) - 1))
+        self.scene.residual[:, click.window] -= click.sound
+        self.interference = True
         return True
+
+    def _split_misfits(self) -> None:
+        """Where objects leave too much behind, see whether a pair explains it better.
+
+        Two objects at one range pose as one between them, a maximum of the likelihood for one
+        object from which no small step leads away.
+        """
+        for _ in range(_MAX_LOOKS):
+            misfit = [self.scene.misfit(i) for i in range(len(self.scene))]
+            if not misfit or max(misfit) < _MISFIT_SHARE * self.threshold:
+                return
+            worst = int(np.argmax(misfit))
+            distance = np.abs(self.scene.objects.range_m - self.scene.objects.range_m[worst])
+            nearest = np.argsort(distance)[:2].tolist()
+            members = [j for j in nearest if distance[j] < self._reach_m]
+            if not self._try_pairs(members):
+                return
 
     def _add_from_residual(self) -> None:
         tried: list[float] = []
         for _ in range(_EXTRA_ROUNDS):
-            if len(self.objects) >= self.config.max_echoes:
-                return
-            matched = matched_filter(self.model, self.ping, self.residual)
+            matched = matched_filter(self.model, self.ping, self.scene.residual)
             energy = np.sum(matched**2, axis=0)
             for delay in tried:
                 energy[np.abs(self.ping.time_s - delay) < 1.5 * self.ping.step_s] = 0.0
@@ -164,32 +142,16 @@ class ObjectFitter:
             tried.append(float(self.ping.time_s[peak]))
             self._try_add(tried[-1])
 
-    def _split_misfits(self) -> None:
-        """Where objects leave too much behind, see whether a pair explains it better.
-
-        Two objects at one range pose as one between them, a maximum of the likelihood for one
-        object from which no small step leads away.
-        """
-        for _ in range(_MAX_SPLITS):
-            misfit = [self._misfit(i) for i in range(len(self.objects))]
-            if not misfit or max(misfit) < _MISFIT_SHARE * self.threshold:
-                return
-            if not self._try_split(int(np.argmax(misfit))):
-                return
-
     def _search_again(self) -> None:
         """Look at each object alone, all others taken off: another lobe may fit better."""
-        for i in range(len(self.objects)):
-            if len(self._cluster(i)) == 1:
+        for i in range(len(self.scene)):
+            if len(self.scene.cluster(i)) == 1:
                 continue
-            one = self.objects.take([i])
+            one = self.scene.objects.take([i])
+            samples = self.scene.alone([i])
+            width = _RESEARCH_HALF_WIDTH_M
             found = scan(
-                self.model,
-                self.ping,
-                self._alone([i]),
-                float(one.range_m[0]),
-                _RESEARCH_HALF_WIDTH_M,
-                self.bearings,
+                self.model, self.ping, samples, float(one.range_m[0]), width, self.bearings
             )
             best_range, best_bearing, strength, gain = found.best()
             here = int(np.argmin(np.abs(self.bearings - one.bearing_rad[0])))
@@ -197,132 +159,114 @@ class ObjectFitter:
             if gain > float(found.gain[:, near].max()) + _SWITCH_NATS:
                 self._try_instead([i], one_object(best_range, best_bearing, strength), 0.0)
 
-    def _merge_close(self) -> None:
-        """See whether one object explains what two close ones do (two that repair a slip)."""
-        reach = self.model.speed_m_s * self.model.pulses[0].envelope_sigma_s
-        again = True
-        while again:
-            again = False
-            r = self.objects.range_m
-            close = [
-                (i, j) for i in range(r.size) for j in range(i) if abs(r[i] - r[j]) < reach
-            ]
-            for pair in close[:_MAX_SPLITS]:
-                samples = self._alone(list(pair))
-                centre = float(np.mean(r[list(pair)]))
-                found = scan(self.model, self.ping, samples, centre, 0.5 * reach, self.bearings)
-                best_range, best_bearing, strength, _ = found.best()
-                one = one_object(best_range, best_bearing, strength)
-                if self._try_instead(list(pair), one, -self.threshold):
-                    again = True
-                    break
-                if not any(self.rivals[i] for i in pair):
-                    self._try_pairs(list(pair))
+    def _reconsider_close(self) -> None:
+        """Close objects: perhaps one explains both (one repaired the other's slip), or a better
+        pair does."""
+        for _ in range(_MAX_LOOKS):
+            pairs = self._close_pairs()
+            if not any(self._try_merge(pair) for pair in pairs):
+                break
+        for pair in self._close_pairs()[:_MAX_LOOKS]:
+            if not any(self.scene.rivals[i] for i in pair):
+                self._try_pairs(pair)
 
     def _drop_weak(self) -> Explained:
         """Drop what the likelihood does not miss, weakest first; measure what stays."""
-        gains: dict[float, float] = {}
-        covariances: dict[float, FloatArray] = {}
-        pending = [float(r) for r in self.objects.range_m]
-        while pending:
-            # Objects change places in the list as clusters are refined: go by their range.
-            i = int(np.argmin(np.abs(self.objects.range_m - pending[0])))
-            members = self._cluster(i)
-            refined = self._settle(members)
-            known = {float(r) for r in self.objects.range_m}
-            for k, r in enumerate(refined.objects.range_m.tolist()):
-                gains[r] = float(refined.gain[k])
-                covariances[r] = refined.covariance[k]
-            pending = [r for r in known if r not in gains]
-        order = [float(r) for r in self.objects.range_m]
-        return Explained(
-            objects=self.objects,
-            gain=np.array([gains[r] for r in order]),
-            covariance=np.array([covariances[r] for r in order]).reshape(-1, 3, 3),
-            windows=self.windows,
-            sounds=self.sounds,
-            residual=self.residual,
-            threshold=self.threshold,
-            rivals=self.rivals,
-            interference=self.interference,
-        )
+        count = len(self.scene)
+        ranges = self.scene.objects.range_m.copy()
+        measured: list[tuple[Refined, FloatArray]] = []
+        for members in self.scene.clusters():
+            # Clusters are refined one by one, which reorders the list: find them by range.
+            now = [int(np.argmin(np.abs(self.scene.objects.range_m - ranges[i]))) for i in members]
+            measured.append(self._measure(sorted(set(now))))
+        if count and measured:
+            order = [m for m in measured if len(m[0].objects)]
+            gain = np.concatenate([g for _, g in order]) if order else np.zeros(0)
+            covariance = (
+                np.concatenate([r.covariance for r, _ in order]) if order else np.zeros((0, 3, 3))
+            )
+        else:
+            gain, covariance = np.zeros(0), np.zeros((0, 3, 3))
+        return Explained(self.scene, gain, covariance, self.threshold, self.interference)
 
     # ------------------------------------------------------------------------- helpers
 
-    def _settle(self, members: list[int]) -> Measured:
+    def _measure(self, members: list[int]) -> tuple[Refined, FloatArray]:
         """Refine a cluster, dropping its weakest object as long as that costs too little."""
+        scene = self.scene
         while True:
-            samples = self._alone(members)
-            cluster = self.objects.take(members)
-            refined = self._refined(cluster, samples)
-            gain = self._gains(refined, samples)
+            samples, window = scene.alone(members), scene.span(members)
+            refined = scene.refined(scene.objects.take(members), samples, window)
+            gain = refined.strength_loss.copy()
+            for i in np.nonzero(gain < _SURE_FACTOR * self.threshold)[0].tolist():
+                rest = [j for j in range(len(members)) if j != i]
+                gain[i] = self._cost(refined.objects.take(rest), members, window) - refined.cost
+            rivals = [scene.rivals[i] for i in members]
             weakest = int(np.argmin(gain))
             if gain[weakest] >= self.threshold:
-                rivals = [self.rivals[i] for i in members]
-                self._replace_with(members, refined.objects, rivals)
-                return Measured(refined.objects, gain, refined.covariance)
-            keep = [i for i in range(len(cluster)) if i != weakest]
-            first_new = len(self.objects) - len(members)
-            rivals = [self.rivals[members[i]] for i in keep]
-            self._replace_with(members, refined.objects.take(keep), rivals)
-            members = list(range(first_new, len(self.objects)))
+                scene.replace(members, refined.objects, rivals)
+                return refined, gain
+            keep = [i for i in range(len(members)) if i != weakest]
+            members = scene.replace(members, refined.objects.take(keep), [rivals[i] for i in keep])
             if not members:
-                return Measured(no_objects(), np.zeros(0), np.zeros((0, 3, 3)))
+                return Refined(
+                    refined.objects.take([]), 0.0, np.zeros((0, 3, 3)), np.zeros(0)
+                ), np.zeros(0)
 
-    def _gains(self, refined: Refined, samples: ComplexArray) -> FloatArray:
-        """What the likelihood loses without each object, the others refitted."""
-        objects = refined.objects
-        window = window_of(self.model, self.ping, objects)
-        gain = refined.strength_loss.copy()
-        for i in np.nonzero(gain < _SURE_FACTOR * self.threshold)[0].tolist():
-            others = objects.take([j for j in range(len(objects)) if j != i])
-            cost = self._cost(others, samples, window)
-            gain[i] = cost - refined.cost
-        return gain
-
-    def _cost(self, objects: Objects, samples: ComplexArray, window: slice) -> float:
+    def _cost(self, objects: Objects, members: list[int], window: slice) -> float:
+        samples = self.scene.alone(members)
         if len(objects):
-            return refine(self.model, self.ping, samples, window, objects, self.priors).cost
-        sound = samples[:, window] * self.ping.weight[:, window]
-        return float(np.vdot(sound, sound).real)
+            return self.scene.refined(objects, samples, window).cost
+        return self.scene.silence_cost(samples, window)
 
-    def _misfit(self, i: int) -> float:
-        """Excess of the residual around an object over what noise leaves, nats."""
-        window = self.windows[i]
-        weight = self.ping.weight[:, window]
-        left = self.residual[:, window] * weight
-        return float(np.vdot(left, left).real) - int(np.count_nonzero(weight))
+    def _close_pairs(self) -> list[list[int]]:
+        r = self.scene.objects.range_m
+        return [
+            [j, i] for i in range(r.size) for j in range(i) if abs(r[i] - r[j]) < self._reach_m
+        ]
 
-    def _try_split(self, i: int) -> bool:
-        near = self.model.speed_m_s * self.model.pulses[0].envelope_sigma_s
-        distance = np.abs(self.objects.range_m - self.objects.range_m[i])
-        members = [int(j) for j in np.argsort(distance)[:2] if distance[j] < near]
-        return self._try_pairs(members)
+    def _try_merge(self, pair: list[int]) -> bool:
+        samples = self.scene.alone(pair)
+        centre = float(np.mean(self.scene.objects.range_m[pair]))
+        found = scan(self.model, self.ping, samples, centre, 0.5 * self._reach_m, self.bearings)
+        best_range, best_bearing, strength, _ = found.best()
+        return self._try_instead(
+            pair, one_object(best_range, best_bearing, strength), -self.threshold
+        )
+
+    def _try_instead(self, members: list[int], others: Objects, extra: float) -> bool:
+        """Put other objects in the place of some, if the refined likelihood gains by more."""
+        scene = self.scene
+        samples, window = scene.alone(members), scene.span(members)
+        before = scene.refined(scene.objects.take(members), samples, window).cost
+        after = scene.refined(others, samples, window)
+        if after.cost > before - extra:
+            return False
+        scene.replace(members, after.objects)
+        return True
 
     def _try_pairs(self, members: list[int]) -> bool:
         """Put the best pair in the place of one or two objects, if the likelihood gains."""
-        window = slice(
-            min(self.windows[i].start for i in members), max(self.windows[i].stop for i in members)
-        )
+        scene = self.scene
+        window = scene.span(members)
         if self.ping.clipped[:, window].any():
             return False
-        samples = self._alone(members)
-        centre = float(np.mean(self.objects.range_m[members]))
-        now = self._refined(self.objects.take(members), samples)
-        pairs = [
-            refine(self.model, self.ping, samples, window, pair, self.priors)
-            for pair in best_pairs(self.model, self.ping, samples, centre, self.config)
-        ]
-        if not pairs:
+        samples = scene.alone(members)
+        centre = float(np.mean(scene.objects.range_m[members]))
+        starts = best_pairs(self.model, self.ping, samples, centre, self.config)
+        if not starts:
             return False
+        now = scene.refined(scene.objects.take(members), samples, window)
+        pairs = scene.refined_rivals(starts, samples, window)
         score = np.array([pair.cost + self._implausibility(pair.objects) for pair in pairs])
         best = pairs[int(np.argmin(score))]
         extra = self.threshold if len(members) == 1 else 0.0
         if float(score.min()) > now.cost + self._implausibility(now.objects) - extra:
             return False
         weight = np.exp(-(score - score.min()))
-        rivals = _rivals(best.objects, [p.objects for p in pairs], weight)
-        self._replace_with(members, best.objects, rivals)
+        scene.replace(
+            members, best.objects, rivals_of(best.objects, [p.objects for p in pairs], weight)
+        )
         return True
 
     def _implausibility(self, objects: Objects) -> float:
@@ -335,89 +279,20 @@ class ObjectFitter:
         heard = np.maximum(np.abs(objects.strength) * gain, 1e-12)
         return float(np.sum(2.0 * np.log(heard) - np.log(np.maximum(gain, 1e-3))))
 
-    def _try_instead(self, members: list[int], others: Objects, extra: float) -> bool:
-        """Put other objects in the place of some, if the refined likelihood gains by it."""
-        samples = self._alone(members)
-        both = self.objects.take(members).join(others)
-        window = window_of(self.model, self.ping, both)
-        before = self._cost(self.objects.take(members), samples, window)
-        after = refine(self.model, self.ping, samples, window, others, self.priors)
-        if after.cost > before - extra:
-            return False
-        self._replace_with(members, after.objects)
-        return True
 
-    def _cluster(self, i: int) -> list[int]:
-        """Objects whose sound overlaps that of object i, in chains, i included."""
-        members, low, high = {i}, self.windows[i].start, self.windows[i].stop
-        while True:
-            more = {
-                j
-                for j, w in enumerate(self.windows)
-                if j not in members and w.start < high and w.stop > low
-            }
-            if not more:
-                return sorted(members)
-            members |= more
-            low = min(self.windows[j].start for j in members)
-            high = max(self.windows[j].stop for j in members)
+def rivals_of(best: Objects, pairs: list[Objects], weight: FloatArray) -> list[Rivals]:
+    """Bearings that other likely pairs give each of the best two objects, by rank of bearing.
 
-    def _refined(self, cluster: Objects, samples: ComplexArray) -> Refined:
-        window = window_of(self.model, self.ping, cluster)
-        return refine(self.model, self.ping, samples, window, cluster, self.priors)
-
-    def _replace(self, members: list[int]) -> None:
-        refined = self._refined(self.objects.take(members), self._alone(members))
-        self._replace_with(members, refined.objects, [self.rivals[i] for i in members])
-
-    def _replace_with(
-        self, members: list[int], objects: Objects, rivals: list[Rivals] | None = None
-    ) -> None:
-        """Take the members off the list and put other objects at its end."""
-        self.residual = self._alone(members)
-        rest = [j for j in range(len(self.objects)) if j not in members]
-        self.objects = self.objects.take(rest)
-        self.windows = [self.windows[j] for j in rest]
-        self.sounds = [self.sounds[j] for j in rest]
-        self.rivals = [self.rivals[j] for j in rest]
-        for k in range(len(objects)):
-            self._append(objects.take([k]), rivals[k] if rivals else ())
-
-    def _append(self, one: Objects, rivals: Rivals = ()) -> None:
-        window = window_of(self.model, self.ping, one)
-        rendered = signals(self.model, one, self.ping.time_s[window]).value[:, 0, :]
-        sound = one.strength[0] * rendered
-        self.objects = self.objects.join(one)
-        self.windows.append(window)
-        self.sounds.append(sound)
-        self.rivals.append(rivals)
-        self.residual[:, window] -= sound
-
-    def _alone(self, members: list[int]) -> ComplexArray:
-        samples = self.residual.copy()
-        for i in members:
-            samples[:, self.windows[i]] += self.sounds[i]
-        return samples
-
-
-@dataclass(frozen=True, eq=False)
-class Measured:
-    """Objects of a cluster with gains (k,) and covariances (k, 3, 3)."""
-
-    objects: Objects
-    gain: FloatArray
-    covariance: FloatArray
-
-
-def _rivals(best: Objects, pairs: list[Objects], weight: FloatArray) -> list[Rivals]:
-    """Bearings that other likely pairs give each of the two objects, in order of bearing."""
+    Parameters
+    ----------
+    weight : shape (len(pairs),), relative to the best pair's 1.
+    """
     keep = weight > math.exp(-_RIVAL_NATS)
     if np.count_nonzero(keep) < 2:
         return [(), ()]
-    sorted_bearings = np.array([np.sort(p.bearing_rad) for p in pairs])[keep]
+    bearings = np.array([np.sort(p.bearing_rad) for p in pairs])[keep]
     share = weight[keep] / weight[keep].sum()
     rank = np.argsort(np.argsort(best.bearing_rad))
     return [
-        tuple(zip(sorted_bearings[:, r].tolist(), share.tolist(), strict=True))
-        for r in rank.tolist()
+        tuple(zip(bearings[:, r].tolist(), share.tolist(), strict=True)) for r in rank.tolist()
     ]

@@ -2,14 +2,11 @@
 
 Echoes overlap as waves, so they are fitted on the complex baseband: every object puts one
 delayed pulse into each ear, with gains and carrier phases that its place dictates. Objects are
-refined by damped least squares (Levenberg-Marquardt); each is re-searched against the residual
-plus itself, the step of the superimposed-signal algorithm [1]_.
+refined by damped least squares (Levenberg-Marquardt [1]_), several rival sets at a time.
 
 References
 ----------
-.. [1] M. Feder and E. Weinstein, "Parameter estimation of superimposed signals using the EM
-   algorithm", IEEE Trans. Acoust. Speech Signal Process. 36(4), 1988, 477-489.
-.. [2] K. Levenberg 1944; D. Marquardt, SIAM J. Appl. Math. 11(2), 1963, 431-441.
+.. [1] K. Levenberg, Quart. Appl. Math. 2, 1944; D. Marquardt, SIAM J. Appl. Math. 11(2), 1963.
 """
 
 from __future__ import annotations
@@ -22,53 +19,12 @@ import numpy as np
 from ..types import ComplexArray, FloatArray
 from .conditioning import Conditioned
 from .model import HeadModel
+from .objects import Objects
 
 _ROUNDS = 12
 _TOLERANCE = 1e-2  # of the cost, nats
-
-
-@dataclass(frozen=True, eq=False)
-class Objects:
-    """k objects of one ping; all arrays shape (k,). Velocity positive = moving away."""
-
-    range_m: FloatArray
-    bearing_rad: FloatArray
-    velocity_m_s: FloatArray
-    strength: ComplexArray
-
-    def __len__(self) -> int:
-        return int(self.range_m.size)
-
-    def take(self, index: np.ndarray | list[int]) -> Objects:
-        """The chosen ones."""
-        index = np.asarray(index, np.intp)
-        return Objects(
-            self.range_m[index],
-            self.bearing_rad[index],
-            self.velocity_m_s[index],
-            self.strength[index],
-        )
-
-    def join(self, other: Objects) -> Objects:
-        """These and the others."""
-        return Objects(
-            np.concatenate([self.range_m, other.range_m]),
-            np.concatenate([self.bearing_rad, other.bearing_rad]),
-            np.concatenate([self.velocity_m_s, other.velocity_m_s]),
-            np.concatenate([self.strength, other.strength]),
-        )
-
-
-def no_objects() -> Objects:
-    """An empty set."""
-    return Objects(np.zeros(0), np.zeros(0), np.zeros(0), np.zeros(0, complex))
-
-
-def one_object(range_m: float, bearing_rad: float, strength: complex) -> Objects:
-    """A set of one object at rest."""
-    return Objects(
-        np.array([range_m]), np.array([bearing_rad]), np.zeros(1), np.array([strength])
-    )
+_MAX_STEP_M, _MAX_STEP_RAD = 0.02, 0.05
+_UNKNOWNS = 5  # of an object: range, bearing, velocity, two parts of the strength
 
 
 @dataclass(frozen=True, eq=False)
@@ -86,32 +42,29 @@ def signals(model: HeadModel, objects: Objects, time_s: FloatArray) -> Signals:
     geometry = model.geometry(objects.range_m, objects.bearing_rad)
     factor = (geometry.gain * model.carrier(geometry))[:, :, None]
     lag = time_s - geometry.delay_s[:, :, None]  # (2, k, n)
-    pulse, slope = np.empty(lag.shape, complex), np.empty(lag.shape, complex)
-    for ear, template in enumerate(model.pulses):
-        pulse[ear], slope[ear] = template.evaluate(lag[ear])
+    pulse, slope = model.pulse_pair.evaluate(lag)
     # Velocity turns the phase about the pulse's peak, so that it is not confounded with phase.
     turning_s = lag - model.pulses[0].peak_time_s
     omega_d = model.doppler_rad_s_per_m_s * objects.velocity_m_s[:, None]
     if np.any(objects.velocity_m_s):
         factor = factor * np.exp(1j * omega_d * turning_s)
-    value = factor * (pulse + geometry.tilt_s[:, :, None] / (2j * math.pi) * slope)
+    value = factor * (pulse + (geometry.tilt_s[:, :, None] / (2j * math.pi)) * slope)
     moved = -factor * slope - 1j * omega_d * value
-    phase = -1j * model.omega * value
-    by_range, by_bearing = geometry.delay_per_m, geometry.delay_per_rad
+    phase = (-1j * model.omega) * value
     relative_gain = geometry.gain_per_rad / np.maximum(geometry.gain, 1e-9)
+    by_range, by_bearing = geometry.delay_per_m, geometry.delay_per_rad
+    turn = relative_gain - 1j * model.omega * _relative(by_bearing)
     return Signals(
         value=value,
-        by_range=moved * by_range[:, :, None] + phase * _relative(by_range),
-        by_bearing=moved * by_bearing[:, :, None]
-        + phase * _relative(by_bearing)
-        + value * relative_gain[:, :, None],
-        by_velocity=1j * model.doppler_rad_s_per_m_s * turning_s * value,
+        by_range=moved * by_range[:, :, None] + phase * _relative(by_range)[:, :, None],
+        by_bearing=moved * by_bearing[:, :, None] + value * turn[:, :, None],
+        by_velocity=(1j * model.doppler_rad_s_per_m_s) * turning_s * value,
     )
 
 
 def _relative(slope: FloatArray) -> FloatArray:
-    """Of each ear against the mean of both, ready to multiply (2, k, n)."""
-    return np.asarray((slope - slope.mean(axis=0))[:, :, None])
+    """Of each ear against the mean of both."""
+    return slope - 0.5 * (slope[0] + slope[1])
 
 
 @dataclass(frozen=True, eq=False)
@@ -121,7 +74,7 @@ class Refined:
     Attributes
     ----------
     cost
-        Weighted sum of squared residuals, in nats (twice the usual chi-square's half).
+        Weighted sum of squared residuals: minus log likelihood, nats, but for a constant.
     covariance
         shape (k, 3, 3): of (range, bearing, velocity) of each object.
     strength_loss
@@ -150,128 +103,200 @@ def refine(
     objects: Objects,
     priors: Priors,
 ) -> Refined:
-    """Fit the objects' parameters to samples in a window by damped least squares [2]_.
+    """Fit objects to the samples in a window; see `refine_rivals`."""
+    return refine_rivals(model, ping, samples, window, [objects], priors)[0]
+
+
+def refine_rivals(
+    model: HeadModel,
+    ping: Conditioned,
+    samples: ComplexArray,
+    window: slice,
+    rivals: list[Objects],
+    priors: Priors,
+) -> list[Refined]:
+    """Fit rival sets of objects to the same samples by damped least squares [1]_.
 
     Parameters
     ----------
     samples : complex (2, n), what the objects are to explain (others taken off).
+    rivals : sets of equally many objects, each fitted on its own.
     """
-    time = ping.time_s[window]
-    weight = ping.weight[:, window]
-    target = (samples[:, window] * weight).ravel()
-    damping = 1e-3
-    rendered = signals(model, objects, time)
-    objects = _with_best_strengths(objects, rendered, weight, target)
-    cost, residual = _cost(objects, rendered, weight, target, priors)
-    normal = np.eye(5 * len(objects))
+    problem = _Problem(model, ping, samples, window, priors, len(rivals))
+    objects = problem.with_best_strengths(_joined(rivals))
+    state = problem.evaluate(objects)
+    damping = np.full(len(rivals), 1e-3)
+    normal, gradient = problem.normal_equations(state)
     for _ in range(_ROUNDS):
-        jacobian = _jacobian(objects, rendered, weight)
-        normal, gradient = _normal_equations(jacobian, residual, objects, priors)
-        improved = False
-        for _ in range(4):
-            damped = normal + damping * np.diag(np.diag(normal))
-            step = np.linalg.solve(damped, gradient)
-            trial = _moved(objects, step, priors)
-            rendered_trial = signals(model, trial, time)
-            trial_cost, trial_residual = _cost(trial, rendered_trial, weight, target, priors)
-            if trial_cost < cost:
-                improved = True
-                break
-            damping *= 8.0
-        if not improved:
+        diagonal = np.einsum("bii->bi", normal)
+        damped = normal + (damping[:, None] * diagonal)[:, :, None] * np.eye(diagonal.shape[1])
+        step = np.linalg.solve(damped, gradient[:, :, None])[:, :, 0]
+        trial = problem.evaluate(problem.moved(state.objects, step))
+        gained = state.cost - trial.cost
+        better = gained > 0.0
+        damping = np.where(better, np.maximum(damping / 8.0, 1e-7), damping * 8.0)
+        state = trial if better.all() else problem.chosen(better, trial, state)
+        if np.all(gained < _TOLERANCE) and (better.all() or damping.min() > 1.0):
             break
-        gained = cost - trial_cost
-        objects, rendered, cost, residual = trial, rendered_trial, trial_cost, trial_residual
-        damping = max(damping / 8.0, 1e-7)
-        if gained < _TOLERANCE:
-            break
-    return _measured(objects, cost, normal)
+        if better.any():
+            normal, gradient = problem.normal_equations(state)
+    return problem.measured(state, normal)
 
 
-def _with_best_strengths(
-    objects: Objects, rendered: Signals, weight: FloatArray, target: ComplexArray
-) -> Objects:
-    k = len(objects)
-    basis = (rendered.value * weight[:, None, :]).transpose(1, 0, 2).reshape(k, -1)
-    gram = basis.conj() @ basis.T
-    # Objects that coincide, or lie where nothing is known, must not break the solution.
-    gram[np.diag_indices(k)] += 1e-6 * gram.trace().real / k + 1e-12
-    strength = np.linalg.solve(gram, basis.conj() @ target)
-    return Objects(objects.range_m, objects.bearing_rad, objects.velocity_m_s, strength)
+def _joined(rivals: list[Objects]) -> Objects:
+    joined = rivals[0]
+    for other in rivals[1:]:
+        joined = joined.join(other)
+    return joined
 
 
-def _cost(
-    objects: Objects,
-    rendered: Signals,
-    weight: FloatArray,
-    target: ComplexArray,
-    priors: Priors,
-) -> tuple[float, ComplexArray]:
-    sound = np.tensordot(objects.strength, rendered.value, axes=(0, 1))  # (2, n)
-    residual = target - (sound * weight).ravel()
-    prior = objects.velocity_m_s / priors.velocity_sigma_m_s
-    return float(np.vdot(residual, residual).real + 0.5 * (prior @ prior)), residual
+@dataclass(frozen=True, eq=False)
+class _State:
+    """All rivals' objects (b * k), their signals, residuals (b, 2 n) and costs (b,)."""
+
+    objects: Objects
+    rendered: Signals
+    residual: ComplexArray
+    cost: FloatArray
 
 
-def _jacobian(objects: Objects, rendered: Signals, weight: FloatArray) -> ComplexArray:
-    """Derivatives of the weighted sound, shape (5 k, 2 n): r, bearing, v, Re a, Im a."""
-    a = objects.strength[None, :, None]
-    parts = (
-        a * rendered.by_range,
-        a * rendered.by_bearing,
-        a * rendered.by_velocity,
-        rendered.value,
-        1j * rendered.value,
-    )
-    stacked = np.stack([part * weight[:, None, :] for part in parts])  # (5, 2, k, n)
-    k, n = stacked.shape[2:]
-    return stacked.transpose(2, 0, 1, 3).reshape(5 * k, 2 * n)
+class _Problem:
+    """The samples to explain, for b rivals of k objects each."""
 
+    def __init__(
+        self,
+        model: HeadModel,
+        ping: Conditioned,
+        samples: ComplexArray,
+        window: slice,
+        priors: Priors,
+        rivals: int,
+    ) -> None:
+        self.model = model
+        self.time_s = ping.time_s[window]
+        self.weight = ping.weight[:, window]
+        self.target = (samples[:, window] * self.weight).ravel()
+        self.priors = priors
+        self.b = rivals
 
-def _normal_equations(
-    jacobian: ComplexArray, residual: ComplexArray, objects: Objects, priors: Priors
-) -> tuple[FloatArray, FloatArray]:
-    normal = (jacobian.conj() @ jacobian.T).real
-    gradient = (jacobian.conj() @ residual).real
-    velocity = np.arange(2, normal.shape[0], 5)
-    precision = 0.5 / priors.velocity_sigma_m_s**2
-    normal[velocity, velocity] += precision
-    gradient[velocity] -= precision * objects.velocity_m_s
-    normal[np.diag_indices_from(normal)] += 1e-12 * np.trace(normal) / normal.shape[0]
-    return normal, gradient
+    def evaluate(self, objects: Objects) -> _State:
+        rendered = signals(self.model, objects, self.time_s)
+        sound = objects.strength[None, :, None] * rendered.value
+        n = self.time_s.size
+        total = sound.reshape(2, self.b, -1, n).sum(axis=2) * self.weight[:, None, :]
+        residual = self.target - total.transpose(1, 0, 2).reshape(self.b, -1)
+        velocity = (objects.velocity_m_s / self.priors.velocity_sigma_m_s).reshape(self.b, -1)
+        cost = np.einsum("bn,bn->b", residual.real, residual.real)
+        cost += np.einsum("bn,bn->b", residual.imag, residual.imag)
+        cost += 0.5 * np.sum(velocity**2, axis=1)
+        return _State(objects, rendered, residual, cost)
 
+    def with_best_strengths(self, objects: Objects) -> Objects:
+        value = signals(self.model, objects, self.time_s).value * self.weight[:, None, :]
+        basis = self._by_rival(value)  # (b, k, 2 n)
+        k = basis.shape[1]
+        gram = basis.conj() @ basis.transpose(0, 2, 1)
+        # Objects that coincide, or lie where nothing is known, must not break the solution.
+        size = np.einsum("bii->b", gram).real / k
+        gram = gram + (1e-6 * size + 1e-12)[:, None, None] * np.eye(k)
+        match = basis.conj() @ self.target[:, None]
+        return objects.with_strength(np.linalg.solve(gram, match)[:, :, 0].ravel())
 
-def _moved(objects: Objects, step: FloatArray, priors: Priors) -> Objects:
-    step = step.reshape(-1, 5)
-    limit = priors.max_bearing_rad
-    return Objects(
-        np.maximum(objects.range_m + np.clip(step[:, 0], -0.02, 0.02), 1e-3),
-        np.clip(objects.bearing_rad + np.clip(step[:, 1], -0.05, 0.05), -limit, limit),
-        objects.velocity_m_s + step[:, 2],
-        objects.strength + step[:, 3] + 1j * step[:, 4],
-    )
+    def normal_equations(self, state: _State) -> tuple[FloatArray, FloatArray]:
+        """Normal matrices (b, 5 k, 5 k) and gradients (b, 5 k) for steps of all unknowns."""
+        jacobian = self._jacobian(state)
+        conjugate = jacobian.conj()
+        normal = (conjugate @ jacobian.transpose(0, 2, 1)).real
+        gradient = (conjugate @ state.residual[:, :, None])[:, :, 0].real
+        velocity = np.arange(2, normal.shape[1], _UNKNOWNS)
+        precision = 0.5 / self.priors.velocity_sigma_m_s**2
+        normal[:, velocity, velocity] += precision
+        gradient[:, velocity] -= precision * state.objects.velocity_m_s.reshape(self.b, -1)
+        size = np.einsum("bii->b", normal) / normal.shape[1]
+        normal += (1e-12 * size)[:, None, None] * np.eye(normal.shape[1])
+        return normal, gradient
 
+    def _jacobian(self, state: _State) -> ComplexArray:
+        """Derivatives of the weighted sound by all unknowns, shape (b, 5 k, 2 n)."""
+        a = state.objects.strength[None, :, None]
+        r = state.rendered
+        parts = (a * r.by_range, a * r.by_bearing, a * r.by_velocity, r.value, 1j * r.value)
+        stacked = np.stack(parts, axis=2) * self.weight[:, None, None, :]  # (2, b k, 5, n)
+        n = self.time_s.size
+        rows = stacked.reshape(2, self.b, -1, n).transpose(1, 2, 0, 3)
+        return np.asarray(rows.reshape(self.b, -1, 2 * n))
 
-def _measured(objects: Objects, cost: float, normal: FloatArray) -> Refined:
-    # The cost is |residual|^2 of complex noise of variance 1, its Hessian 2 * normal.
-    inverse = 0.5 * np.linalg.pinv(normal, hermitian=True)
-    k = len(objects)
-    covariance = np.empty((k, 3, 3))
-    loss = np.empty(k)
-    for i in range(k):
-        block = inverse[5 * i : 5 * i + 5, 5 * i : 5 * i + 5]
-        covariance[i] = block[:3, :3]
-        strength = np.array([objects.strength[i].real, objects.strength[i].imag])
-        # Setting the strength to 0, all else free to follow: half the Wald statistic.
-        loss[i] = 0.5 * strength @ np.linalg.pinv(block[3:, 3:], hermitian=True) @ strength
-    return Refined(objects, cost, covariance, loss)
+    def moved(self, objects: Objects, step: FloatArray) -> Objects:
+        step = step.reshape(-1, _UNKNOWNS)
+        limit = self.priors.max_bearing_rad
+        range_step = np.clip(step[:, 0], -_MAX_STEP_M, _MAX_STEP_M)
+        bearing_step = np.clip(step[:, 1], -_MAX_STEP_RAD, _MAX_STEP_RAD)
+        return Objects(
+            np.maximum(objects.range_m + range_step, 1e-3),
+            np.clip(objects.bearing_rad + bearing_step, -limit, limit),
+            objects.velocity_m_s + step[:, 2],
+            objects.strength + step[:, 3] + 1j * step[:, 4],
+        )
+
+    def chosen(self, better: np.ndarray, trial: _State, old: _State) -> _State:
+        """The trial where it is better, the old state elsewhere."""
+        if not better.any():
+            return old
+        each = np.repeat(better, len(old.objects) // self.b)
+        objects = Objects(
+            *(
+                np.where(each, new, before)
+                for new, before in zip(trial.objects.columns(), old.objects.columns(), strict=True)
+            )
+        )
+        mask = each[None, :, None]
+        rendered = Signals(
+            *(
+                np.where(mask, getattr(trial.rendered, name), getattr(old.rendered, name))
+                for name in ("value", "by_range", "by_bearing", "by_velocity")
+            )
+        )
+        return _State(
+            objects,
+            rendered,
+            np.where(better[:, None], trial.residual, old.residual),
+            np.where(better, trial.cost, old.cost),
+        )
+
+    def measured(self, state: _State, normal: FloatArray) -> list[Refined]:
+        # The cost is |residual|^2 of complex noise of variance 1, its Hessian 2 * normal.
+        inverse = 0.5 * np.linalg.inv(normal)
+        k = len(state.objects) // self.b
+        result = []
+        for number in range(self.b):
+            objects = state.objects.take(np.arange(number * k, (number + 1) * k))
+            blocks = np.array(
+                [
+                    inverse[number, _UNKNOWNS * i : _UNKNOWNS * (i + 1)][
+                        :, _UNKNOWNS * i : _UNKNOWNS * (i + 1)
+                    ]
+                    for i in range(k)
+                ]
+            )
+            strength = np.stack([objects.strength.real, objects.strength.imag], axis=1)
+            # Setting a strength to 0, all else free to follow: half the Wald statistic.
+            pull = np.linalg.solve(blocks[:, 3:, 3:], strength[:, :, None])[:, :, 0]
+            loss = 0.5 * np.sum(strength * pull, axis=1)
+            result.append(Refined(objects, float(state.cost[number]), blocks[:, :3, :3], loss))
+        return result
+
+    def _by_rival(self, value: ComplexArray) -> ComplexArray:
+        """(2, b k, n) to (b, k, 2 n)."""
+        n = self.time_s.size
+        rows = value.reshape(2, self.b, -1, n).transpose(1, 2, 0, 3)
+        return np.asarray(rows.reshape(self.b, -1, 2 * n))
 
 
 def window_of(model: HeadModel, ping: Conditioned, objects: Objects) -> slice:
     """Samples that the objects reach."""
     delay = model.geometry(objects.range_m, objects.bearing_rad).delay_s
-    first = float(delay.min()) + min(p.start_s for p in model.pulses)
-    last = float(delay.max()) + max(p.end_s for p in model.pulses)
+    first = float(delay.min()) + model.pulse_pair.start_s
+    last = float(delay.max()) + model.pulse_pair.end_s
     start = int(np.searchsorted(ping.time_s, first))
     stop = int(np.searchsorted(ping.time_s, last, side="right"))
     return slice(start, max(stop, start))

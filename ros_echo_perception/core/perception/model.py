@@ -17,7 +17,7 @@ from ..acoustics import directivity
 from ..head import Head, Transducer
 from ..types import ComplexArray, FloatArray
 from .baseband import ReceiverFilter
-from .pulse import PulseTemplate, pulse_templates
+from .pulse import PulseTemplate, pulse_pair, pulse_templates
 
 _TABLE_STEP_RAD = 2e-3
 
@@ -47,6 +47,7 @@ class HeadModel:
         self.pulses: tuple[PulseTemplate, PulseTemplate] = pulse_templates(
             head, burst_cycles, receiver
         )
+        self.pulse_pair = pulse_pair(self.pulses)
         transducers = (head.transmitter, *head.receivers)
         self._beams = _beam_tables(transducers)
         half_db = head.gain_mismatch_db / 2.0
@@ -91,7 +92,8 @@ class HeadModel:
         confounded with many turns of the carrier.
         """
         mismatch = self._ear_phase.reshape(2, *(1,) * (geometry.delay_s.ndim - 1))
-        relative = geometry.delay_s - geometry.delay_s.mean(axis=0)
+        delay = geometry.delay_s
+        relative = delay - 0.5 * (delay[0] + delay[1])
         return np.asarray(np.exp(1j * (mismatch - self.omega * relative)))
 
     def range_of_delay(self, delay_s: float, bearing_rad: float = 0.0) -> float:

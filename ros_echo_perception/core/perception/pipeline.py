@@ -12,9 +12,10 @@ from ..types import EnvelopeFit, PingFlag, PingResult, RawEcho
 from .baseband import Baseband, receiver_filter, to_baseband
 from .conditioning import Conditioned, condition
 from .config import ProcessingConfig
-from .fit import Explained, ObjectFitter, range_min
+from .fit import ObjectFitter, range_min
 from .model import HeadModel
 from .report import report_detections
+from .scene import Explained
 from .search import matched_filter
 from .seeds import find_candidates
 
@@ -124,7 +125,7 @@ def _envelope(baseband: Baseband, ping: Conditioned, explained: Explained) -> En
         first_time_s=float(baseband.time_s[0]),
         step_s=baseband.step_s,
         measured=np.abs(baseband.samples),
-        fitted=np.abs(ping.samples - explained.residual),
+        fitted=np.abs(ping.samples - explained.scene.residual),
         threshold=(sigma[0] * factor, sigma[1] * factor),
         blanking_end_s=ping.blanking_end_s,
     )

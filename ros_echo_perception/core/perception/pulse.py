@@ -64,6 +64,43 @@ class PulseTemplate:
         return self.evaluate(self.start_s + offset_s + np.arange(count) * step_s)[0]
 
 
+class PulsePair:
+    """The templates of both ears on one time axis, looked up together."""
+
+    def __init__(self, pulses: tuple[PulseTemplate, PulseTemplate]) -> None:
+        self.start_s = min(p.start_s for p in pulses)
+        self.end_s = max(p.end_s for p in pulses)
+        self._fine_step_s = pulses[0].fine_step_s
+        self._size = int(round((self.end_s - self.start_s) / self._fine_step_s)) + 2
+        self._table = np.zeros((2, 2 * self._size), complex)  # value and slope; both ears
+        for ear, pulse in enumerate(pulses):
+            first = int(round((pulse.first_time_s - self.start_s) / self._fine_step_s))
+            part = slice(ear * self._size + first, ear * self._size + first + pulse.table.size)
+            self._table[0, part] = pulse.table
+            self._table[1, part] = pulse.slope
+
+    def evaluate(self, time_s: FloatArray) -> tuple[ComplexArray, ComplexArray]:
+        """Value and derivative at times of shape (2, ...), left ear first."""
+        position = (time_s - self.start_s) / self._fine_step_s
+        np.minimum(np.maximum(position, 0.0, out=position), self._size - 1 - 1e-9, out=position)
+        index = position.astype(np.intp)
+        fraction = position - index
+        index[1] += self._size
+        low = self._table[:, index]
+        value, slope = low + fraction * (self._table[:, index + 1] - low)
+        return value, slope
+
+
+@lru_cache(maxsize=32)
+def _pair(pulses: tuple[PulseTemplate, PulseTemplate]) -> PulsePair:
+    return PulsePair(pulses)
+
+
+def pulse_pair(pulses: tuple[PulseTemplate, PulseTemplate]) -> PulsePair:
+    """Both templates joined; computed once and kept."""
+    return _pair(pulses)
+
+
 @lru_cache(maxsize=64)
 def _template(
     head: _HeadKey, ear: int, burst_cycles: float, receiver: ReceiverFilter

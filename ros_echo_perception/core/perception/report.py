@@ -11,8 +11,9 @@ from ..types import Detection, DetectionFlag, Ears, FloatArray
 from .bearing import BearingPosterior, among_rivals, bearing_posterior
 from .conditioning import Conditioned
 from .config import ProcessingConfig
-from .fit import Explained, range_min
+from .fit import range_min
 from .model import HeadModel
+from .scene import Explained
 from .search import bearing_grid, scan
 
 _POSTERIOR_HALF_WIDTH_M = 0.012
@@ -50,14 +51,14 @@ def _detection(
     objects = explained.objects
     one = objects.take([i])
     range_m, bearing_rad = float(one.range_m[0]), float(one.bearing_rad[0])
-    found = scan(model, ping, explained.alone(i), range_m, _POSTERIOR_HALF_WIDTH_M, bearings)
+    found = scan(model, ping, explained.scene.alone([i]), range_m, _POSTERIOR_HALF_WIDTH_M, bearings)
     covariance = explained.covariance[i]
     fitted_sigma = math.sqrt(max(float(covariance[1, 1]), 1e-12))
     posterior = bearing_posterior(found, bearing_rad, fitted_sigma)
-    if explained.rivals[i]:
-        posterior = among_rivals(explained.rivals[i], fitted_sigma)
+    if explained.scene.rivals[i]:
+        posterior = among_rivals(explained.scene.rivals[i], fitted_sigma)
     amplitude, snr_db = _per_ear(model, ping, explained, i)
-    window = explained.windows[i]
+    window = explained.scene.windows[i]
     flags = _flags(ping, window, posterior)
     velocity_sigma = math.sqrt(float(covariance[2, 2]))
     informative = velocity_sigma < 0.7 * config.velocity_sigma_m_s

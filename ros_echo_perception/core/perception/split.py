@@ -14,8 +14,9 @@ import numpy as np
 from ..types import ComplexArray, FloatArray
 from .conditioning import Conditioned
 from .config import ProcessingConfig
-from .joint import Objects, signals, window_of
+from .joint import signals, window_of
 from .model import HeadModel
+from .objects import Objects
 
 _MAX_PLACES = 520
 _RANGE_STEPS = 2  # on each side of the centre
