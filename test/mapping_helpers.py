@@ -105,3 +105,23 @@ def seen_from(pose, points, sigma_rad=0.01):
 
 AMBIGUOUS = DetectionFlag.BEARING_AMBIGUOUS
 MULTIPATH = DetectionFlag.MULTIPATH_SUSPECTED
+
+
+POLES = [(1.5, 0.4), (2.0, -0.6), (3.0, 0.1), (2.5, 1.5)]
+LASTING = {"occupied_decay_s": 0.0, "free_decay_s": 0.0}
+
+
+def along_x(time_s):
+    """Half a metre a second, slowly turning."""
+    return Pose2(0.5 * time_s, 0.0, 0.1 * time_s)
+
+
+def every(n, step_s=0.1, start_s=0.1):
+    return [start_s + step_s * k for k in range(n)]
+
+
+def drive_past(points=POLES, n=15, sigma_rad=0.01, pose_at=along_x, **values):
+    found = look(
+        mapper(**(LASTING | values)), every(n), lambda p: seen_from(p, points, sigma_rad), pose_at
+    )
+    return found
