@@ -155,7 +155,7 @@ def test_a_node_that_cannot_start_ends_the_demo_with_its_log(tmp_path):
         timeout=60,
     )
     assert result.returncode == 2
-    assert "the processing node ended by itself" in result.stderr
+    assert "node ended by itself (exit code 1)" in result.stderr
     assert "no_such_head.yaml" in result.stderr
     assert nodes_of(out) == []
 

@@ -42,17 +42,22 @@ class Recorder(Node):
             OCCUPANCY: self._on_map,
             ODOMETRY: self._on_odometry,
         }
+        # Raw echoes only when told to: the driver starts to ping for its first listener.
         self._subscribed: set[str] = set()
+        self._held_back = {RAW_ECHO}
         self.create_timer(_DISCOVERY_PERIOD_S, self._discover)
         self._discover()
 
     def expect(self, topic: str, type_name: str, depth: int) -> None:
-        """Subscribe to a reliable topic before it exists: not even its first message is missed."""
+        """Subscribe to a reliable topic, also before it exists."""
+        self._held_back.discard(type_name)
+        if topic in self._subscribed:
+            return
         self._subscribe(topic, type_name, quality(True, False, depth))
 
     def _discover(self) -> None:
         for topic, types in self.get_topic_names_and_types():
-            if topic in self._subscribed or len(types) != 1:
+            if topic in self._subscribed or len(types) != 1 or types[0] in self._held_back:
                 continue
             profiles = [i.qos_profile for i in self.get_publishers_info_by_topic(topic)]
             if profiles:

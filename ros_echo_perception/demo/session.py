@@ -55,7 +55,7 @@ class Plan:
                 "world_file": str(self.world_path()),
                 "simulator.ping_rate_hz": self.rate_hz,
                 "simulator.seed": self.seed,
-                "wait_for_consumer_s": 10.0,
+                "wait_for_consumer_s": _START_TIMEOUT_S,
             }
         if node == "mapping":
             mount = SimulatorConfig().mount
@@ -144,20 +144,16 @@ def run(plan: Plan, console: Console, started_s: float) -> Outcome:
     logs.mkdir(parents=True, exist_ok=True)
     monitor = Monitor()
     with NodeGroup(logs) as nodes, BagWriter(plan.out / "bag") as bag:
-        for name in NODES[:2]:
-            _start(nodes, name, plan)
+        started = {name: _start(nodes, name, plan) for name in NODES}
         rclpy.init()
         recorder = Recorder(bag, monitor)
-        for topic in (topics.RAW_ECHO, topics.DETECTIONS, topics.ODOMETRY):
-            recorder.expect(f"/{topic.name}", topic.message, depth=topics.QOS[topic.qos].depth)
         spinner = _Spinner(recorder)
         try:
-            _wait_for_consumers(recorder, nodes, spinner)
-            driver = _start(nodes, "driver", plan)
+            _wait_for_processing(recorder, nodes, spinner)
             first_s = _wait_for_first_ping(monitor, nodes, spinner) - started_s
             parameters = _watch(plan, console, recorder, monitor, nodes, spinner)
-            driver.stop()
-            nodes.forget(driver)
+            started["driver"].stop()
+            nodes.forget(started["driver"])
             _linger(nodes, spinner)
         finally:
             spinner.close()
@@ -170,19 +166,23 @@ def _start(nodes: NodeGroup, name: str, plan: Plan) -> NodeProcess:
     return nodes.start(name, f"ros_echo_perception.nodes.{name}", plan.arguments(name))
 
 
-def _wait_for_consumers(recorder: Recorder, nodes: NodeGroup, spinner: _Spinner) -> None:
-    """Until processing listens to echoes, and mapping to detections and odometry."""
+def _wait_for_processing(recorder: Recorder, nodes: NodeGroup, spinner: _Spinner) -> None:
+    """Until processing listens to raw echoes; only then the recorder does.
+
+    The driver starts to ping for its first listener, and that must be the processing node.
+    """
     end = time.monotonic() + _START_TIMEOUT_S
-    wanted = [topics.RAW_ECHO.name, topics.DETECTIONS.name, topics.ODOMETRY.name]
-    while any(recorder.count_subscribers(f"/{name}") < 2 for name in wanted):  # we are one
+    while not recorder.count_subscribers(f"/{topics.RAW_ECHO.name}"):
         nodes.check()
         spinner.check()
         if time.monotonic() > end:
             raise SourceError(
-                f"processing and mapping did not come up in {_START_TIMEOUT_S:g} s; their logs "
-                f"are in {nodes.log_folder}."
+                f"processing did not come up in {_START_TIMEOUT_S:g} s; its log is in "
+                f"{nodes.log_folder}."
             )
-        time.sleep(0.05)
+        time.sleep(0.02)
+    for topic in (topics.RAW_ECHO, topics.DETECTIONS, topics.ODOMETRY):
+        recorder.expect(f"/{topic.name}", topic.message, depth=topics.QOS[topic.qos].depth)
 
 
 def _wait_for_first_ping(monitor: Monitor, nodes: NodeGroup, spinner: _Spinner) -> float:
