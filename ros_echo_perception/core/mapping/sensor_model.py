@@ -79,7 +79,7 @@ def arc_samples(
     spread = np.hypot(h.spread_rad, surface_width_m / h.range_m)
     bearing_span = np.where(h.uniform, h.spread_rad, _SPAN_SIGMAS * spread)
     n_range = _count(2.0 * range_span, 0.4 * resolution_m, 5)
-    n_bearing = _count(2.0 * bearing_span * h.range_m, 0.7 * resolution_m, 11)
+    n_bearing = _count(2.0 * bearing_span * h.range_m, 0.9 * resolution_m, 11)
     owner, k = _ragged(n_range * n_bearing)
     across, along = k % n_bearing[owner], k // n_bearing[owner]
     u = -1.0 + 2.0 * (along + (across * _GOLDEN_SECTION) % 1.0) / n_range[owner]
