@@ -48,6 +48,7 @@ def filled_monitor():
 def test_monitor_counts_gaps_and_unanswered_pings():
     monitor = filled_monitor()
     assert (monitor.pings_sent, monitor.raw_lost) == (5, 1)
+    assert monitor.answered == 2
     assert monitor.unanswered == 1  # number 11; 14 may still be under way
     assert monitor.n_detections == 3
     assert monitor.raw_flags == 16

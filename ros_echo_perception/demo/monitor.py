@@ -120,6 +120,11 @@ class Monitor:
         return self.pings_sent - len(self.raw_received_s)
 
     @property
+    def answered(self) -> int:
+        """Raw echoes that were seen and became detections."""
+        return sum(1 for n in self.raw_received_s if n in self.pings)
+
+    @property
     def unanswered(self) -> int:
         """Raw echoes older than the newest detections that never became detections."""
         if not self.pings:
