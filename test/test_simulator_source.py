@@ -184,8 +184,8 @@ def test_fast_enough_to_run_live():
     source.echo(0)
     times = []
     for k in range(100, 1000, 30):
-        start = time.process_time()
+        start = time.thread_time()
         source.echo(k)
-        times.append(time.process_time() - start)
-    # About 4 ms of computing when the machine has nothing else to do; 25 Hz leaves 40 ms for all.
-    assert np.median(times) < 0.03
+        times.append(time.thread_time() - start)
+    # 3.3 ms of one core in this room; at 25 Hz all nodes together have 40 ms of each core.
+    assert np.median(times) < 0.012

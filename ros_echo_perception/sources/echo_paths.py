@@ -13,7 +13,6 @@ from typing import NamedTuple
 
 import numpy as np
 
-from ..core.acoustics import directivity
 from ..core.head import Head, Transducer
 from ..core.types import ComplexArray, FloatArray, Pose2
 from .candidates import Candidates, IndexArray, find_candidates
@@ -62,8 +61,10 @@ class EchoPaths:
         Of the point that reflects, seen from the reference point when the sound reaches it.
     length_m, tof_s
         Length of the way and time of flight to each ear.
+    departure_rad, arrival_rad
+        Where the way leaves the transmitter to and comes to each ear from, in the head's frame.
     amplitude
-        Complex, of spreading, scattering and both directivities; absorption is not in it.
+        Complex, of spreading and scattering; beams and absorption are not in it (`path_filter`).
     doppler
         Received over emitted frequency.
     """
@@ -75,6 +76,8 @@ class EchoPaths:
     radial_velocity_m_s: FloatArray
     length_m: FloatArray
     tof_s: FloatArray
+    departure_rad: FloatArray
+    arrival_rad: FloatArray
     amplitude: ComplexArray
     doppler: FloatArray
 
@@ -120,6 +123,8 @@ def trace(
         / np.maximum(np.hypot(way[:, 0], way[:, 1]), 1e-9),
         length_m=np.array([ear.length for ear in ears]),
         tof_s=np.array([ear.tof for ear in ears]),
+        departure_rad=np.array([ear.departure for ear in ears]),
+        arrival_rad=np.array([ear.arrival for ear in ears]),
         amplitude=np.array([ear.amplitude for ear in ears]),
         doppler=np.array([ear.doppler for ear in ears]),
     )
@@ -128,6 +133,8 @@ def trace(
 class _Ear(NamedTuple):
     length: FloatArray
     tof: FloatArray
+    departure: FloatArray
+    arrival: FloatArray
     amplitude: ComplexArray
     doppler: FloatArray
 
@@ -152,9 +159,9 @@ def _ear(
     leaving = np.arctan2(rays.departure[:, 1], rays.departure[:, 0]) - motion.pose.yaw_rad
     coming = np.arctan2(rays.arrival[:, 1], rays.arrival[:, 0]) - motion.pose.yaw_rad
     coming = coming - motion.turn_rad_s * tof
-    amplitude = rays.amplitude * directivity(sender, leaving) * directivity(ear, coming)
     ahead = (rays.departure @ motion.velocity(sender.position_m)) / _length(rays.departure)
-    return _Ear(c * tof, tof, np.asarray(amplitude), np.asarray((c + towards) / (c - ahead)))
+    doppler = np.asarray((c + towards) / (c - ahead))
+    return _Ear(c * tof, tof, leaving, coming, rays.amplitude, doppler)
 
 
 def _rays(

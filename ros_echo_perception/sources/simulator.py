@@ -1,9 +1,9 @@
 """The simulator: a robot drives through a world and pings, and everything about it is known.
 
 Reading order: `world`, `robot_path`, `candidates`, `echo_paths` (which ways the sound takes),
-`scattering` (how strong), `synthesis` (the sound at the ears), `front_end` (the converter),
-`truth` (what an ideal observer would report). It computes, it does not measure: real rooms have
-floors, furniture, wind and rough walls.
+`scattering` (how strong), `path_filter` (beams and air over the band), `synthesis` (the sound at
+the ears), `front_end` (the converter), `truth` (what an ideal observer would report). It
+computes, it does not measure: real rooms have floors, furniture, wind and rough walls.
 """
 
 from __future__ import annotations

@@ -15,10 +15,11 @@ from ..core.acoustics import (
     pulse_metrics,
     resonance_response,
 )
-from ..core.air import absorption_db_per_m, speed_of_sound
+from ..core.air import speed_of_sound
 from ..core.head import Head, Transducer
 from ..core.types import ComplexArray, FloatArray
 from .echo_paths import EchoPaths
+from .path_filter import PathFilter
 from .simulator_config import SimulatorConfig
 
 REFERENCE_BURST_CYCLES = 3.0
@@ -33,7 +34,6 @@ _TAIL_S = 0.004
 """Longest ringing: kept free behind the record so that nothing wraps round to its start."""
 _CASING_RESONANCE, _CASING_Q = 0.985, 28.0
 """The direct pulse also runs through the casing, which rings longer than the transducers."""
-_ABSORPTION_NEPER = math.log(10.0) / 20.0
 
 
 class Synthesis:
@@ -55,17 +55,13 @@ class Synthesis:
         self._frequency = np.asarray(self._bins * bin_hz, dtype=np.float64)
         air = config.temperature_c, config.relative_humidity
         self.speed_of_sound_m_s = speed_of_sound(*air)
-        self._absorption = _ABSORPTION_NEPER * absorption_db_per_m(self._frequency, *air)
-        self.carrier_absorption = float(
-            _ABSORPTION_NEPER * absorption_db_per_m(unit.carrier_hz, *air)
-        )
+        self._way = PathFilter(unit, self._frequency, *air)
         self._receiver = self._receivers()
         self.level = 2.0 * config.source_level / self._peak(REFERENCE_BURST_CYCLES)
-        self.pulse_peak = np.array(
-            [self.level * abs(g) * self._peak(config.burst_cycles, ear)
-             for ear, g in enumerate(self._gains())]
+        self._pulse_peak = np.array(
+            [self.level * gain * self._peak_parts(config.burst_cycles, ear)
+             for ear, gain in enumerate(self._gains())]
         )  # fmt: skip
-        """Peak of the envelope of an echo of amplitude 1/m in each ear, shape (2,)."""
         self._emitted_table = self._emission()
         self._sender = self._emitted(np.ones(1))[0]
         self.crosstalk = self._crosstalk()
@@ -73,23 +69,28 @@ class Synthesis:
     def echoes(self, paths: EchoPaths) -> FloatArray:
         """Sum of all echoes, without direct pulse, noise and gain curve, (2, n_samples)."""
         spectrum = np.zeros((2, self._n_fft // 2 + 1), complex)
-        audible_peak = _INAUDIBLE * self.config.noise_rms
-        for ear, peaks in enumerate(self.peaks(paths)):
-            audible = np.flatnonzero(peaks > audible_peak)
-            spectrum[ear, self._bins] = self._ear(paths, ear, audible)
+        at_nodes = self._way.at_nodes(paths)
+        audible = self._peaks(paths, at_nodes) > _INAUDIBLE * self.config.noise_rms
+        for ear in (0, 1):
+            heard = np.flatnonzero(audible[ear])
+            spectrum[ear, self._bins] = self._ear(paths, ear, heard, at_nodes[ear, heard])
         return self._samples(spectrum)
 
     def peaks(self, paths: EchoPaths) -> FloatArray:
         """Peak of each echo's envelope as a fraction of full scale, shape (2, n)."""
-        absorption = np.exp(-self.carrier_absorption * paths.length_m)
-        return np.asarray(np.abs(paths.amplitude) * absorption * self.pulse_peak[:, None])
+        return self._peaks(paths, self._way.at_nodes(paths))
 
-    def _ear(self, paths: EchoPaths, ear: int, audible: NDArray[np.intp]) -> ComplexArray:
-        doppler = paths.doppler[ear, audible]
-        amplitude = paths.amplitude[ear, audible]
-        length_m = paths.length_m[ear, audible]
-        ways = self._phases(paths.tof_s[ear, audible] + self._start_s)
-        ways *= np.exp(-self._absorption * length_m[:, None])
+    def _peaks(self, paths: EchoPaths, at_nodes: FloatArray) -> FloatArray:
+        shape = np.einsum("enk,ek->en", at_nodes, self._pulse_peak)
+        return np.asarray(np.abs(paths.amplitude * shape))
+
+    def _ear(
+        self, paths: EchoPaths, ear: int, heard: NDArray[np.intp], at_nodes: FloatArray
+    ) -> ComplexArray:
+        doppler = paths.doppler[ear, heard]
+        amplitude = paths.amplitude[ear, heard]
+        ways = self._phases(paths.tof_s[ear, heard] + self._start_s)
+        ways *= self._way.over_band(at_nodes)
         # einsum rather than @: a threaded product would fight the other nodes for the cores.
         if np.all(doppler == 1.0):
             total = np.einsum("n,nf->f", amplitude, ways) * self._sender
@@ -153,11 +154,17 @@ class Synthesis:
         """Peak of the pulse's envelope for a unit drive; the mean of both ears if not told."""
         if ear is None:
             return 0.5 * (self._peak(burst_cycles, 0) + self._peak(burst_cycles, 1))
+        return float(abs(np.sum(self._peak_parts(burst_cycles, ear))))
+
+    def _peak_parts(self, burst_cycles: float, ear: int) -> ComplexArray:
+        """What each node of the path filter contributes to the peak of the envelope, (nodes,)."""
         delay_s = pulse_metrics(self.unit, ear, burst_cycles).peak_delay_s
         offset = self._frequency - self.unit.carrier_hz
         spectrum = echo_spectrum(self.unit, ear, self._frequency, burst_cycles)
         bin_hz = float(self._frequency[1] - self._frequency[0])
-        return float(abs(np.sum(spectrum * np.exp(2j * math.pi * offset * delay_s))) * bin_hz)
+        return np.asarray(
+            self._way.spread @ (spectrum * np.exp(2j * math.pi * offset * delay_s)) * bin_hz
+        )
 
     def _crosstalk(self) -> FloatArray:
         """The direct pulse through air and casing, (2, n_samples)."""
