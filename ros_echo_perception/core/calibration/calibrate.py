@@ -15,7 +15,7 @@ from ..errors import CalibrationError, refuse
 from ..head import Head
 from ..perception.baseband import receiver_filter
 from ..perception.config import ProcessingConfig
-from ..perception.joint import Priors, refine, window_of
+from ..perception.joint import Priors, excerpt, refine, window_of
 from ..perception.model import HeadModel
 from ..perception.objects import one_object
 from ..perception.pipeline import prepare
@@ -224,7 +224,8 @@ def _error(observation: Observation, head: Head) -> tuple[float, float]:
     window = window_of(model, ping, start)
     config = ProcessingConfig()
     priors = Priors(config.velocity_sigma_m_s, config.max_bearing_rad)
-    found = refine(model, ping, ping.samples, window, start, priors).objects
+    data = excerpt(ping, ping.samples, window)
+    found = refine(model, data, [start], priors)[0].objects
     return (
         float(found.range_m[0]) - observation.range_m,
         float(found.bearing_rad[0]) - observation.bearing_rad,

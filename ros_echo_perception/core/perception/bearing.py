@@ -7,6 +7,7 @@ baseline apart, and the other two weigh the teeth.
 
 from __future__ import annotations
 
+import dataclasses
 import math
 from dataclasses import dataclass
 
@@ -32,8 +33,8 @@ class BearingPosterior:
         Holds about 95 % of the probability.
     alternatives
         Other peaks as (bearing_rad, weight), most likely first.
-    range_m
-        Most likely range given all bearings.
+    range_m, range_sigma_m
+        Mean and standard deviation of the range over all bearings; NaN and 0 where not known.
     """
 
     bearing_rad: float
@@ -41,6 +42,8 @@ class BearingPosterior:
     interval_rad: tuple[float, float]
     alternatives: tuple[tuple[float, float], ...]
     ambiguous: bool
+    range_m: float = math.nan
+    range_sigma_m: float = 0.0
 
 
 def bearing_posterior(
@@ -71,7 +74,9 @@ def bearing_posterior(
     # A peak narrower than the grid has the width that the fit says, whatever the grid shows.
     spread = np.where(spread < step, fitted_sigma_rad, np.maximum(spread, fitted_sigma_rad))
     spread[own] = max(fitted_sigma_rad, spread[own] if spread[own] > step else 0.0)
-    return _summary(weight, mean, spread)
+    range_m, range_sigma_m = _range_moments(found)
+    summary = _summary(weight, mean, spread)
+    return dataclasses.replace(summary, range_m=range_m, range_sigma_m=range_sigma_m)
 
 
 def among_rivals(
@@ -81,6 +86,13 @@ def among_rivals(
     mean = np.array([bearing for bearing, _ in rivals])
     weight = np.array([share for _, share in rivals])
     return _summary(weight, mean, np.full(mean.size, fitted_sigma_rad))
+
+
+def _range_moments(found: Scan) -> tuple[float, float]:
+    weight = np.exp(found.gain - found.gain.max()).sum(axis=1)
+    weight = weight / weight.sum()
+    mean = float(weight @ found.range_m)
+    return mean, math.sqrt(float(weight @ (found.range_m - mean) ** 2))
 
 
 def _over_bearing(found: Scan) -> FloatArray:

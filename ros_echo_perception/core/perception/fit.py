@@ -11,12 +11,12 @@ from ..types import FloatArray
 from .conditioning import Conditioned
 from .config import ProcessingConfig
 from .interference import find_click, is_click
-from .joint import Priors, Refined
+from .joint import Priors, window_of
 from .model import HeadModel
 from .objects import Objects, one_object
 from .pairing import Candidate
 from .scene import Explained, Rivals, Scene
-from .search import bearing_grid, matched_filter, scan
+from .search import Scan, bearing_grid, matched_filter, scan
 from .split import best_pairs
 
 _SEED_HALF_WIDTH_M = 0.03
@@ -75,8 +75,7 @@ class ObjectFitter:
 
     def fit(self, candidates: list[Candidate]) -> Explained:
         """Objects from candidates and from what the residual still shows."""
-        for candidate in candidates:
-            self._try_add(candidate.mean_delay_s)
+        self._add_apart(candidates)
         self._split_misfits()
         self._add_from_residual()
         self._search_again()
@@ -85,21 +84,47 @@ class ObjectFitter:
 
     # ------------------------------------------------------------------ steps of fit()
 
-    def _try_add(self, delay_s: float) -> None:
-        """Add an object near a delay, unless noise or a click explains what is there."""
+    def _add_apart(self, candidates: list[Candidate]) -> None:
+        """Candidates that stand apart are refined in one go, the others one after another."""
+        reach = self.model.pulse_pair.core_end_s - self.model.pulse_pair.core_start_s
+        delay = np.array([c.mean_delay_s for c in candidates])
+        apart, close = [], []
+        for number, candidate in enumerate(candidates):
+            others = np.delete(delay, number)
+            lonely = not others.size or float(np.abs(others - delay[number]).min()) > reach
+            (apart if lonely else close).append(candidate.mean_delay_s)
+        starts = [f for f in (self._look(d) for d in apart) if f is not None]
+        if starts:
+            refined = self.scene.refined_apart([one for one, _ in starts])
+            for result, (_, found) in zip(refined, starts, strict=True):
+                self.scene.add(result, found=found)
+        for d in close:
+            self._try_add(d)
+
+    def _look(self, delay_s: float) -> tuple[Objects, Scan] | None:
+        """The best object near a delay, unless noise or a click explains what is there."""
         range_m = self.model.range_of_delay(delay_s)
         if len(self.scene) >= self.config.max_echoes:
-            return
+            return None
         if not self.range_min_m < range_m < self.config.max_range_m:
-            return
+            return None
         width = _SEED_HALF_WIDTH_M + 0.25 * self.model.head.baseline_m
         residual = self.scene.residual
         found = scan(self.model, self.ping, residual, range_m, width, self.bearings)
         best_range, best_bearing, strength, gain = found.best()
         if gain < self.threshold or self._take_off_click(delay_s, gain):
+            return None
+        return one_object(best_range, best_bearing, strength), found
+
+    def _try_add(self, delay_s: float) -> None:
+        start = self._look(delay_s)
+        if start is None:
             return
-        self.scene.append(one_object(best_range, best_bearing, strength))
-        self.scene.settle(self.scene.cluster(len(self.scene) - 1))
+        window = window_of(self.model, self.ping, start[0])
+        new = self.scene.add(self.scene.refined(start[0], self.scene.residual, window))
+        members = self.scene.cluster(new[0])
+        if len(members) > 1:
+            self.scene.settle(members)
 
     def _take_off_click(self, delay_s: float, object_gain: float) -> bool:
         peak_s = delay_s + self.model.pulses[0].peak_time_s
@@ -167,57 +192,43 @@ class ObjectFitter:
             if not any(self._try_merge(pair) for pair in pairs):
                 break
         for pair in self._close_pairs()[:_MAX_LOOKS]:
-            if not any(self.scene.rivals[i] for i in pair):
+            if not any(self.scene.rivals(pair)):
                 self._try_pairs(pair)
 
     def _drop_weak(self) -> Explained:
         """Drop what the likelihood does not miss, weakest first; measure what stays."""
-        count = len(self.scene)
-        ranges = self.scene.objects.range_m.copy()
-        measured: list[tuple[Refined, FloatArray]] = []
-        for members in self.scene.clusters():
-            # Clusters are refined one by one, which reorders the list: find them by range.
-            now = [int(np.argmin(np.abs(self.scene.objects.range_m - ranges[i]))) for i in members]
-            measured.append(self._measure(sorted(set(now))))
-        if count and measured:
-            order = [m for m in measured if len(m[0].objects)]
-            gain = np.concatenate([g for _, g in order]) if order else np.zeros(0)
-            covariance = (
-                np.concatenate([r.covariance for r, _ in order]) if order else np.zeros((0, 3, 3))
-            )
-        else:
-            gain, covariance = np.zeros(0), np.zeros((0, 3, 3))
-        return Explained(self.scene, gain, covariance, self.threshold, self.interference)
+        scene = self.scene
+        unsettled = [m for m in scene.clusters() if not scene.settled(m)]
+        while unsettled:
+            scene.settle(unsettled[0])
+            unsettled = [m for m in scene.clusters() if not scene.settled(m)]
+        gain = self._gains()
+        while gain.size and gain.min() < self.threshold:
+            weakest = int(np.argmin(gain))
+            rest = [i for i in scene.cluster(weakest) if i != weakest]
+            scene.remove([weakest])
+            if rest:
+                scene.settle([i - (i > weakest) for i in rest])
+            gain = self._gains()
+        return Explained(scene, gain, self.threshold, self.interference)
 
     # ------------------------------------------------------------------------- helpers
 
-    def _measure(self, members: list[int]) -> tuple[Refined, FloatArray]:
-        """Refine a cluster, dropping its weakest object as long as that costs too little."""
+    def _gains(self) -> FloatArray:
+        """What the likelihood loses without each object, the others of its cluster refitted."""
         scene = self.scene
-        while True:
+        gain = np.array([item.fitted.loss for item in scene.items])
+        for i in np.nonzero(gain < _SURE_FACTOR * self.threshold)[0].tolist():
+            members = scene.cluster(i)
             samples, window = scene.alone(members), scene.span(members)
-            refined = scene.refined(scene.objects.take(members), samples, window)
-            gain = refined.strength_loss.copy()
-            for i in np.nonzero(gain < _SURE_FACTOR * self.threshold)[0].tolist():
-                rest = [j for j in range(len(members)) if j != i]
-                gain[i] = self._cost(refined.objects.take(rest), members, window) - refined.cost
-            rivals = [scene.rivals[i] for i in members]
-            weakest = int(np.argmin(gain))
-            if gain[weakest] >= self.threshold:
-                scene.replace(members, refined.objects, rivals)
-                return refined, gain
-            keep = [i for i in range(len(members)) if i != weakest]
-            members = scene.replace(members, refined.objects.take(keep), [rivals[i] for i in keep])
-            if not members:
-                return Refined(
-                    refined.objects.take([]), 0.0, np.zeros((0, 3, 3)), np.zeros(0)
-                ), np.zeros(0)
-
-    def _cost(self, objects: Objects, members: list[int], window: slice) -> float:
-        samples = self.scene.alone(members)
-        if len(objects):
-            return self.scene.refined(objects, samples, window).cost
-        return self.scene.silence_cost(samples, window)
+            rest = scene.objects.take([j for j in members if j != i])
+            without = (
+                scene.refined(rest, samples, window).cost
+                if len(rest)
+                else scene.silence_cost(samples, window)
+            )
+            gain[i] = without - scene.silence_cost(scene.residual, window)
+        return gain
 
     def _close_pairs(self) -> list[list[int]]:
         r = self.scene.objects.range_m
@@ -242,7 +253,7 @@ class ObjectFitter:
         after = scene.refined(others, samples, window)
         if after.cost > before - extra:
             return False
-        scene.replace(members, after.objects)
+        scene.replace(members, after)
         return True
 
     def _try_pairs(self, members: list[int]) -> bool:
@@ -264,9 +275,8 @@ class ObjectFitter:
         if float(score.min()) > now.cost + self._implausibility(now.objects) - extra:
             return False
         weight = np.exp(-(score - score.min()))
-        scene.replace(
-            members, best.objects, rivals_of(best.objects, [p.objects for p in pairs], weight)
-        )
+        rivals = rivals_of(best.objects, [p.objects for p in pairs], weight)
+        scene.replace(members, best, rivals)
         return True
 
     def _implausibility(self, objects: Objects) -> float:

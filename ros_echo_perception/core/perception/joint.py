@@ -2,7 +2,7 @@
 
 Echoes overlap as waves, so they are fitted on the complex baseband: every object puts one
 delayed pulse into each ear, with gains and carrier phases that its place dictates. Objects are
-refined by damped least squares (Levenberg-Marquardt [1]_), several rival sets at a time.
+refined by damped least squares (Levenberg-Marquardt [1]_), many at a time.
 
 References
 ----------
@@ -38,7 +38,7 @@ class Signals:
 
 
 def signals(model: HeadModel, objects: Objects, time_s: FloatArray) -> Signals:
-    """Render objects of strength 1 at the given times, shape (n,)."""
+    """Render objects of strength 1 at times of shape (n,), or (k, n): each at its own."""
     geometry = model.geometry(objects.range_m, objects.bearing_rad)
     factor = (geometry.gain * model.carrier(geometry))[:, :, None]
     lag = time_s - geometry.delay_s[:, :, None]  # (2, k, n)
@@ -95,37 +95,53 @@ class Priors:
     max_bearing_rad: float
 
 
+@dataclass(frozen=True, eq=False)
+class Excerpts:
+    """What b problems are to explain: times (b, n), samples and weights (b, 2, n).
+
+    Times may go on beyond the record; weights are 0 there.
+    """
+
+    time_s: FloatArray
+    samples: ComplexArray
+    weight: FloatArray
+
+
+def excerpt(ping: Conditioned, samples: ComplexArray, window: slice, copies: int = 1) -> Excerpts:
+    """The same stretch of samples (2, n) for a number of rival explanations."""
+    weight = ping.weight[:, window]
+    return Excerpts(
+        np.broadcast_to(ping.time_s[window], (copies, weight.shape[1])),
+        np.broadcast_to(samples[:, window], (copies, *weight.shape)),
+        np.broadcast_to(weight, (copies, *weight.shape)),
+    )
+
+
+def excerpts(ping: Conditioned, samples: ComplexArray, windows: list[slice]) -> Excerpts:
+    """A stretch of its own for each problem; all get the length of the longest."""
+    n = max(w.stop - w.start for w in windows)
+    index = np.array([w.start for w in windows])[:, None] + np.arange(n)
+    inside = index < ping.time_s.size
+    index = np.minimum(index, ping.time_s.size - 1)
+    weight = np.where(inside, ping.weight[:, index], 0.0)
+    return Excerpts(
+        ping.time_s[index], samples[:, index].transpose(1, 0, 2), weight.transpose(1, 0, 2)
+    )
+
+
 def refine(
-    model: HeadModel,
-    ping: Conditioned,
-    samples: ComplexArray,
-    window: slice,
-    objects: Objects,
-    priors: Priors,
-) -> Refined:
-    """Fit objects to the samples in a window; see `refine_rivals`."""
-    return refine_rivals(model, ping, samples, window, [objects], priors)[0]
-
-
-def refine_rivals(
-    model: HeadModel,
-    ping: Conditioned,
-    samples: ComplexArray,
-    window: slice,
-    rivals: list[Objects],
-    priors: Priors,
+    model: HeadModel, data: Excerpts, problems: list[Objects], priors: Priors
 ) -> list[Refined]:
-    """Fit rival sets of objects to the same samples by damped least squares [1]_.
+    """Fit sets of objects, each to its excerpt, by damped least squares [1]_.
 
     Parameters
     ----------
-    samples : complex (2, n), what the objects are to explain (others taken off).
-    rivals : sets of equally many objects, each fitted on its own.
+    problems : as many sets as excerpts, of equally many objects, each fitted on its own.
     """
-    problem = _Problem(model, ping, samples, window, priors, len(rivals))
-    objects = problem.with_best_strengths(_joined(rivals))
+    problem = _Problems(model, data, priors)
+    objects = problem.with_best_strengths(_joined(problems))
     state = problem.evaluate(objects)
-    damping = np.full(len(rivals), 1e-3)
+    damping = np.full(len(problems), 1e-3)
     normal, gradient = problem.normal_equations(state)
     for _ in range(_ROUNDS):
         diagonal = np.einsum("bii->bi", normal)
@@ -152,7 +168,7 @@ def _joined(rivals: list[Objects]) -> Objects:
 
 @dataclass(frozen=True, eq=False)
 class _State:
-    """All rivals' objects (b * k), their signals, residuals (b, 2 n) and costs (b,)."""
+    """All problems' objects (b * k), their signals, residuals (b, 2 n) and costs (b,)."""
 
     objects: Objects
     rendered: Signals
@@ -160,30 +176,25 @@ class _State:
     cost: FloatArray
 
 
-class _Problem:
-    """The samples to explain, for b rivals of k objects each."""
+class _Problems:
+    """b excerpts to explain by k objects each."""
 
-    def __init__(
-        self,
-        model: HeadModel,
-        ping: Conditioned,
-        samples: ComplexArray,
-        window: slice,
-        priors: Priors,
-        rivals: int,
-    ) -> None:
+    def __init__(self, model: HeadModel, data: Excerpts, priors: Priors) -> None:
         self.model = model
-        self.time_s = ping.time_s[window]
-        self.weight = ping.weight[:, window]
-        self.target = (samples[:, window] * self.weight).ravel()
+        self.b, _, self.n = data.samples.shape
+        self.time_s = data.time_s
+        self.weight = data.weight.transpose(1, 0, 2)[:, :, None, :]  # (2, b, 1, n)
+        self.target = (data.samples * data.weight).reshape(self.b, -1)
         self.priors = priors
-        self.b = rivals
+
+    def _signals(self, objects: Objects) -> Signals:
+        k = len(objects) // self.b
+        return signals(self.model, objects, np.repeat(self.time_s, k, axis=0))
 
     def evaluate(self, objects: Objects) -> _State:
-        rendered = signals(self.model, objects, self.time_s)
+        rendered = self._signals(objects)
         sound = objects.strength[None, :, None] * rendered.value
-        n = self.time_s.size
-        total = sound.reshape(2, self.b, -1, n).sum(axis=2) * self.weight[:, None, :]
+        total = sound.reshape(2, self.b, -1, self.n).sum(axis=2) * self.weight[:, :, 0]
         residual = self.target - total.transpose(1, 0, 2).reshape(self.b, -1)
         velocity = (objects.velocity_m_s / self.priors.velocity_sigma_m_s).reshape(self.b, -1)
         cost = np.einsum("bn,bn->b", residual.real, residual.real)
@@ -192,14 +203,14 @@ class _Problem:
         return _State(objects, rendered, residual, cost)
 
     def with_best_strengths(self, objects: Objects) -> Objects:
-        value = signals(self.model, objects, self.time_s).value * self.weight[:, None, :]
-        basis = self._by_rival(value)  # (b, k, 2 n)
+        value = self._signals(objects).value.reshape(2, self.b, -1, self.n) * self.weight
+        basis = value.transpose(1, 2, 0, 3).reshape(self.b, -1, 2 * self.n)
         k = basis.shape[1]
         gram = basis.conj() @ basis.transpose(0, 2, 1)
         # Objects that coincide, or lie where nothing is known, must not break the solution.
         size = np.einsum("bii->b", gram).real / k
         gram = gram + (1e-6 * size + 1e-12)[:, None, None] * np.eye(k)
-        match = basis.conj() @ self.target[:, None]
+        match = basis.conj() @ self.target[:, :, None]
         return objects.with_strength(np.linalg.solve(gram, match)[:, :, 0].ravel())
 
     def normal_equations(self, state: _State) -> tuple[FloatArray, FloatArray]:
@@ -221,10 +232,9 @@ class _Problem:
         a = state.objects.strength[None, :, None]
         r = state.rendered
         parts = (a * r.by_range, a * r.by_bearing, a * r.by_velocity, r.value, 1j * r.value)
-        stacked = np.stack(parts, axis=2) * self.weight[:, None, None, :]  # (2, b k, 5, n)
-        n = self.time_s.size
-        rows = stacked.reshape(2, self.b, -1, n).transpose(1, 2, 0, 3)
-        return np.asarray(rows.reshape(self.b, -1, 2 * n))
+        stacked = np.stack(parts, axis=2)  # (2, b k, 5, n)
+        rows = stacked.reshape(2, self.b, -1, self.n) * self.weight
+        return np.asarray(rows.transpose(1, 2, 0, 3).reshape(self.b, -1, 2 * self.n))
 
     def moved(self, objects: Objects, step: FloatArray) -> Objects:
         step = step.reshape(-1, _UNKNOWNS)
@@ -285,18 +295,23 @@ class _Problem:
             result.append(Refined(objects, float(state.cost[number]), blocks[:, :3, :3], loss))
         return result
 
-    def _by_rival(self, value: ComplexArray) -> ComplexArray:
-        """(2, b k, n) to (b, k, 2 n)."""
-        n = self.time_s.size
-        rows = value.reshape(2, self.b, -1, n).transpose(1, 2, 0, 3)
-        return np.asarray(rows.reshape(self.b, -1, 2 * n))
-
 
 def window_of(model: HeadModel, ping: Conditioned, objects: Objects) -> slice:
     """Samples that the objects reach."""
+    pair = model.pulse_pair
+    return _window(model, ping, objects, pair.start_s, pair.end_s)
+
+
+def core_of(model: HeadModel, ping: Conditioned, objects: Objects) -> slice:
+    """Samples that the bodies of the objects' pulses reach, their faint tails left out."""
+    pair = model.pulse_pair
+    return _window(model, ping, objects, pair.core_start_s, pair.core_end_s)
+
+
+def _window(
+    model: HeadModel, ping: Conditioned, objects: Objects, before_s: float, after_s: float
+) -> slice:
     delay = model.geometry(objects.range_m, objects.bearing_rad).delay_s
-    first = float(delay.min()) + model.pulse_pair.start_s
-    last = float(delay.max()) + model.pulse_pair.end_s
-    start = int(np.searchsorted(ping.time_s, first))
-    stop = int(np.searchsorted(ping.time_s, last, side="right"))
+    start = int(np.searchsorted(ping.time_s, float(delay.min()) + before_s))
+    stop = int(np.searchsorted(ping.time_s, float(delay.max()) + after_s, side="right"))
     return slice(start, max(stop, start))

@@ -96,14 +96,18 @@ class HeadModel:
         relative = delay - 0.5 * (delay[0] + delay[1])
         return np.asarray(np.exp(1j * (mismatch - self.omega * relative)))
 
-    def range_of_delay(self, delay_s: float, bearing_rad: float = 0.0) -> float:
-        """Range at which the mean delay of both ears is ``delay_s`` (far-field start, Newton)."""
-        r = max((delay_s - self.head.latency_s) * self.speed_m_s / 2.0, 1e-3)
-        for _ in range(3):
-            g = self.geometry(np.array(r), np.array(bearing_rad))
-            slope = float(np.mean(g.delay_per_m))
-            r = max(r - (float(np.mean(g.delay_s)) - delay_s) / max(slope, 1e-4), 1e-3)
-        return r
+    def range_of_delay(self, delay_s: float) -> float:
+        """Range straight ahead at which the mean delay of both ears is ``delay_s``.
+
+        With the transmitter at the origin r + sqrt(r^2 + h^2) = L gives r = (L^2 - h^2) / (2 L);
+        one step of Newton's method mends what other places of the transducers change.
+        """
+        path = max((delay_s - self.head.latency_s) * self.speed_m_s, 2e-3)
+        ear_m = self.head.baseline_m / 2.0
+        r = max((path**2 - ear_m**2) / (2.0 * path), 1e-3)
+        geometry = self.geometry(np.array([r]), np.zeros(1))
+        slope = max(float(geometry.delay_per_m.mean()), 1e-4)
+        return max(r + (delay_s - float(geometry.delay_s.mean())) / slope, 1e-3)
 
 
 class _BeamTables:

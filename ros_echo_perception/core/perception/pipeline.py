@@ -12,7 +12,7 @@ from ..types import EnvelopeFit, PingFlag, PingResult, RawEcho
 from .baseband import Baseband, receiver_filter, to_baseband
 from .conditioning import Conditioned, condition
 from .config import ProcessingConfig
-from .fit import ObjectFitter, range_min
+from .fit import ObjectFitter
 from .model import HeadModel
 from .report import report_detections
 from .scene import Explained
@@ -50,13 +50,13 @@ class EchoPipeline:
         candidates = find_candidates(model, ping, matched, self.config.max_bearing_rad)
         fitter = ObjectFitter(model, ping, self.config)
         explained = fitter.fit(candidates)
-        detections = report_detections(model, ping, explained, self.config)
+        detections = report_detections(explained, self.config, fitter.range_min_m)
         return PingResult(
             emission_time_s=echo.emission_time_s,
             sequence=echo.sequence,
             detections=detections,
             speed_of_sound_m_s=model.speed_m_s,
-            range_min_m=range_min(model, ping),
+            range_min_m=fitter.range_min_m,
             range_max_m=self._range_max(model, echo),
             beam_half_width_rad=self.head.transmitter.half_power_beam_width_rad / 2.0,
             noise=self._noise(model, ping),

@@ -17,6 +17,7 @@ _OVERSAMPLING = 32
 _SPAN_S = 8e-3
 _LEAD_S = 1e-3
 _TAIL_AMPLITUDE = 3e-4
+_CORE_AMPLITUDE = 0.02
 
 
 @dataclass(frozen=True, eq=False)
@@ -70,6 +71,7 @@ class PulsePair:
     def __init__(self, pulses: tuple[PulseTemplate, PulseTemplate]) -> None:
         self.start_s = min(p.start_s for p in pulses)
         self.end_s = max(p.end_s for p in pulses)
+        self.core_start_s, self.core_end_s = _core(pulses)
         self._fine_step_s = pulses[0].fine_step_s
         self._size = int(round((self.end_s - self.start_s) / self._fine_step_s)) + 2
         self._table = np.zeros((2, 2 * self._size), complex)  # value and slope; both ears
@@ -89,6 +91,16 @@ class PulsePair:
         low = self._table[:, index]
         value, slope = low + fraction * (self._table[:, index + 1] - low)
         return value, slope
+
+
+def _core(pulses: tuple[PulseTemplate, PulseTemplate]) -> tuple[float, float]:
+    """Where the pulses are more than a fiftieth of their peak."""
+    first, last = [], []
+    for pulse in pulses:
+        strong = np.nonzero(np.abs(pulse.table) > _CORE_AMPLITUDE)[0]
+        first.append(pulse.first_time_s + float(strong[0]) * pulse.fine_step_s)
+        last.append(pulse.first_time_s + float(strong[-1]) * pulse.fine_step_s)
+    return min(first), max(last)
 
 
 @lru_cache(maxsize=32)

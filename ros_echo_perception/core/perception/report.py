@@ -11,9 +11,9 @@ from ..types import Detection, DetectionFlag, Ears, FloatArray
 from .bearing import BearingPosterior, among_rivals, bearing_posterior
 from .conditioning import Conditioned
 from .config import ProcessingConfig
-from .fit import range_min
 from .model import HeadModel
-from .scene import Explained
+from .objects import Objects
+from .scene import Explained, Scene
 from .search import bearing_grid, scan
 
 _POSTERIOR_HALF_WIDTH_M = 0.012
@@ -22,15 +22,11 @@ _HEARD_DB = 8.0
 
 
 def report_detections(
-    model: HeadModel, ping: Conditioned, explained: Explained, config: ProcessingConfig
+    explained: Explained, config: ProcessingConfig, nearest_m: float
 ) -> tuple[Detection, ...]:
-    """Detections of one ping, nearest first."""
-    bearings = bearing_grid(model, config.max_bearing_rad)
-    found = [
-        _detection(model, ping, explained, i, bearings, config)
-        for i in range(len(explained.objects))
-    ]
-    nearest_m = range_min(model, ping)
+    """Detections of one ping beyond the nearest measurable range, nearest first."""
+    bearings = bearing_grid(explained.scene.model, config.max_bearing_rad)
+    found = [_detection(explained, i, bearings, config) for i in range(len(explained.scene))]
     wanted = [
         d
         for d in found
@@ -41,45 +37,50 @@ def report_detections(
 
 
 def _detection(
-    model: HeadModel,
-    ping: Conditioned,
-    explained: Explained,
-    i: int,
-    bearings: FloatArray,
-    config: ProcessingConfig,
+    explained: Explained, i: int, bearings: FloatArray, config: ProcessingConfig
 ) -> Detection:
-    objects = explained.objects
-    one = objects.take([i])
-    range_m, bearing_rad = float(one.range_m[0]), float(one.bearing_rad[0])
-    found = scan(model, ping, explained.scene.alone([i]), range_m, _POSTERIOR_HALF_WIDTH_M, bearings)
-    covariance = explained.covariance[i]
-    fitted_sigma = math.sqrt(max(float(covariance[1, 1]), 1e-12))
-    posterior = bearing_posterior(found, bearing_rad, fitted_sigma)
-    if explained.scene.rivals[i]:
-        posterior = among_rivals(explained.scene.rivals[i], fitted_sigma)
-    amplitude, snr_db = _per_ear(model, ping, explained, i)
-    window = explained.scene.windows[i]
-    flags = _flags(ping, window, posterior)
+    scene = explained.scene
+    model, ping, item = scene.model, scene.ping, scene.items[i]
+    one = scene.objects.take([i])
+    covariance = item.fitted.covariance
+    posterior = _posterior(scene, i, bearings)
+    amplitude, snr_db = _per_ear(model, ping, one)
     velocity_sigma = math.sqrt(float(covariance[2, 2]))
     informative = velocity_sigma < 0.7 * config.velocity_sigma_m_s
+    range_m, variance_m2 = float(one.range_m[0]), float(covariance[0, 0])
+    if posterior.ambiguous and posterior.range_sigma_m > math.sqrt(variance_m2):
+        range_m, variance_m2 = posterior.range_m, posterior.range_sigma_m**2
     return Detection(
         range_m=range_m,
         bearing_rad=posterior.bearing_rad,
-        range_sigma_m=_range_sigma(range_m, float(covariance[0, 0]), model, config),
+        range_sigma_m=_range_sigma(range_m, variance_m2, model, config),
         bearing_sigma_rad=posterior.sigma_rad,
         bearing_min_rad=posterior.interval_rad[0],
         bearing_max_rad=posterior.interval_rad[1],
-        range_bearing_covariance=float(covariance[0, 1]) if not posterior.ambiguous else 0.0,
+        range_bearing_covariance=0.0 if posterior.ambiguous else float(covariance[0, 1]),
         alternatives=posterior.alternatives,
         ear_amplitude=amplitude,
         ear_snr_db=snr_db,
         ears=_ears(ping, snr_db),
-        existence_probability=_existence(float(explained.gain[i]), explained.threshold, config),
+        existence_probability=_existence(float(explained.gain[i]), explained.threshold),
         envelope_sigma_s=model.pulses[0].envelope_sigma_s,
         radial_velocity_m_s=float(one.velocity_m_s[0]) if informative else math.nan,
         radial_velocity_sigma_m_s=velocity_sigma if informative else math.nan,
-        flags=flags,
+        flags=_flags(ping, item.window, posterior),
     )
+
+
+def _posterior(scene: Scene, i: int, bearings: FloatArray) -> BearingPosterior:
+    item = scene.items[i]
+    sigma = math.sqrt(max(float(item.fitted.covariance[1, 1]), 1e-12))
+    if item.rivals:
+        return among_rivals(item.rivals, sigma)
+    range_m = float(scene.objects.range_m[i])
+    found = item.scan if len(scene.cluster(i)) == 1 else None
+    if found is None:
+        width = _POSTERIOR_HALF_WIDTH_M
+        found = scan(scene.model, scene.ping, scene.alone([i]), range_m, width, bearings)
+    return bearing_posterior(found, float(scene.objects.bearing_rad[i]), sigma)
 
 
 def _range_sigma(
@@ -91,9 +92,8 @@ def _range_sigma(
 
 
 def _per_ear(
-    model: HeadModel, ping: Conditioned, explained: Explained, i: int
+    model: HeadModel, ping: Conditioned, one: Objects
 ) -> tuple[tuple[float, float], tuple[float, float]]:
-    one = explained.objects.take([i])
     gain = model.geometry(one.range_m, one.bearing_rad).gain[:, 0]
     amplitude, snr = [], []
     for ear, pulse in enumerate(model.pulses):
@@ -128,6 +128,6 @@ def _flags(ping: Conditioned, window: slice, posterior: BearingPosterior) -> Det
     return flags
 
 
-def _existence(gain: float, threshold: float, config: ProcessingConfig) -> float:
+def _existence(gain: float, threshold: float) -> float:
     """Odds against noise: at the threshold noise and echoes are about equally frequent."""
     return 1.0 / (1.0 + math.exp(-min(gain - threshold, 50.0)))

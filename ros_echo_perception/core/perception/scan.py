@@ -151,7 +151,8 @@ def scan_from_result(result: PingResult, config: ScanConfig | None = None) -> Sc
     (91, 1.5, 90)
     """
     config = config or ScanConfig()
-    angle = config.angle_increment_rad * np.arange(config.n_beams) - config.half_width_rad
+    steps = np.arange(config.n_beams, dtype=float)
+    angle = np.asarray(config.angle_increment_rad * steps - config.half_width_rad, float)
     ranges = _silent_beams(result, config, angle)
     intensities = np.zeros(config.n_beams)
     for echo in sorted(result.detections, key=lambda item: -item.range_m):  # nearest written last

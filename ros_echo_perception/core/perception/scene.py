@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -9,12 +10,45 @@ import numpy as np
 
 from ..types import ComplexArray, FloatArray
 from .conditioning import Conditioned
-from .joint import Priors, Refined, refine, refine_rivals, signals, window_of
+from .joint import Priors, Refined, core_of, excerpt, excerpts, refine, signals, window_of
 from .model import HeadModel
 from .objects import Objects, no_objects
+from .search import Scan
 
 Rivals = tuple[tuple[float, float], ...]
 """Bearings with weights that equally likely explanations give an object; empty: none."""
+
+
+@dataclass(frozen=True, eq=False)
+class Fitted:
+    """What the refinement said of one object.
+
+    Attributes
+    ----------
+    group
+        Number of the refinement: objects of one group were refined together.
+    covariance
+        shape (3, 3), of (range, bearing, velocity).
+    loss
+        Linearised loss of likelihood without the object, nats.
+    """
+
+    group: int
+    covariance: FloatArray
+    loss: float
+
+
+@dataclass(frozen=True, eq=False)
+class Item:
+    """One object's share of the scene: samples that it and its pulse's body reach, its sound."""
+
+    window: slice
+    core: slice
+    sound: ComplexArray
+    fitted: Fitted
+    rivals: Rivals = ()
+    scan: Scan | None = None
+    """The scan that found it, where it saw the object alone."""
 
 
 class Scene:
@@ -25,60 +59,80 @@ class Scene:
         self.ping = ping
         self.priors = priors
         self.objects = no_objects()
-        self.windows: list[slice] = []
-        self.sounds: list[ComplexArray] = []
-        self.rivals: list[Rivals] = []
+        self.items: list[Item] = []
         self.residual = ping.samples.copy()
+        self._groups = itertools.count()
 
     def __len__(self) -> int:
-        return len(self.objects)
+        return len(self.items)
 
     def alone(self, members: Sequence[int]) -> ComplexArray:
         """Samples (2, n) with all objects but the members taken off."""
         samples = self.residual.copy()
         for i in members:
-            samples[:, self.windows[i]] += self.sounds[i]
+            samples[:, self.items[i].window] += self.items[i].sound
         return samples
 
-    def append(self, one: Objects, rivals: Rivals = ()) -> None:
-        """Add one object and take its sound off the residual."""
-        window = window_of(self.model, self.ping, one)
-        rendered = signals(self.model, one, self.ping.time_s[window]).value[:, 0, :]
-        sound = one.strength[0] * rendered
-        self.objects = self.objects.join(one)
-        self.windows.append(window)
-        self.sounds.append(sound)
-        self.rivals.append(rivals)
-        self.residual[:, window] -= sound
+    def add(
+        self,
+        refined: Refined,
+        rivals: Sequence[Rivals] | None = None,
+        found: Scan | None = None,
+    ) -> list[int]:
+        """Add objects that were refined together; returns their numbers."""
+        group = next(self._groups)
+        first = len(self)
+        for k in range(len(refined.objects)):
+            one = refined.objects.take([k])
+            window = window_of(self.model, self.ping, one)
+            rendered = signals(self.model, one, self.ping.time_s[window]).value[:, 0, :]
+            sound = one.strength[0] * rendered
+            self.objects = self.objects.join(one)
+            self.items.append(
+                Item(
+                    window,
+                    core_of(self.model, self.ping, one),
+                    sound,
+                    Fitted(group, refined.covariance[k], float(refined.strength_loss[k])),
+                    rivals[k] if rivals else (),
+                    found,
+                )
+            )
+            self.residual[:, window] -= sound
+        return list(range(first, len(self)))
 
     def replace(
-        self, members: Sequence[int], objects: Objects, rivals: Sequence[Rivals] | None = None
+        self, members: Sequence[int], refined: Refined, rivals: Sequence[Rivals] | None = None
     ) -> list[int]:
-        """Take the members off the list and put other objects at its end; returns their numbers."""
+        """Take the members off and put others at the end; returns the others' numbers."""
+        self.remove(members)
+        return self.add(refined, rivals)
+
+    def remove(self, members: Sequence[int]) -> None:
+        """Take the members off; those behind them move up."""
         self.residual = self.alone(members)
         rest = [j for j in range(len(self)) if j not in set(members)]
         self.objects = self.objects.take(rest)
-        self.windows = [self.windows[j] for j in rest]
-        self.sounds = [self.sounds[j] for j in rest]
-        self.rivals = [self.rivals[j] for j in rest]
-        for k in range(len(objects)):
-            self.append(objects.take([k]), rivals[k] if rivals else ())
-        return list(range(len(rest), len(self)))
+        self.items = [self.items[j] for j in rest]
+
+    def rivals(self, members: Sequence[int]) -> list[Rivals]:
+        """The rivals of the members."""
+        return [self.items[i].rivals for i in members]
 
     def cluster(self, i: int) -> list[int]:
-        """Objects whose sound overlaps that of object i, in chains, i included."""
-        members, low, high = {i}, self.windows[i].start, self.windows[i].stop
+        """Objects whose pulses' bodies overlap that of object i, in chains, i included."""
+        members, low, high = {i}, self.items[i].core.start, self.items[i].core.stop
         while True:
             more = {
                 j
-                for j, w in enumerate(self.windows)
-                if j not in members and w.start < high and w.stop > low
+                for j, item in enumerate(self.items)
+                if j not in members and item.core.start < high and item.core.stop > low
             }
             if not more:
                 return sorted(members)
             members |= more
-            low = min(self.windows[j].start for j in members)
-            high = max(self.windows[j].stop for j in members)
+            low = min(self.items[j].core.start for j in members)
+            high = max(self.items[j].core.stop for j in members)
 
     def clusters(self) -> list[list[int]]:
         """All clusters."""
@@ -88,26 +142,40 @@ class Scene:
                 found.append(self.cluster(i))
         return found
 
+    def settled(self, members: Sequence[int]) -> bool:
+        """Whether the members, and no others, were last refined together."""
+        groups = {self.items[i].fitted.group for i in members}
+        together = [i for i, item in enumerate(self.items) if item.fitted.group in groups]
+        return len(groups) == 1 and sorted(members) == together
+
     def span(self, members: Sequence[int]) -> slice:
         """Samples that the members reach."""
         return slice(
-            min(self.windows[i].start for i in members), max(self.windows[i].stop for i in members)
+            min(self.items[i].window.start for i in members),
+            max(self.items[i].window.stop for i in members),
         )
 
     def refined(self, objects: Objects, samples: ComplexArray, window: slice) -> Refined:
         """Objects fitted to samples (2, n) in a window."""
-        return refine(self.model, self.ping, samples, window, objects, self.priors)
+        return self.refined_rivals([objects], samples, window)[0]
 
     def refined_rivals(
         self, rivals: list[Objects], samples: ComplexArray, window: slice
     ) -> list[Refined]:
         """Rival sets of objects fitted to the same samples."""
-        return refine_rivals(self.model, self.ping, samples, window, rivals, self.priors)
+        data = excerpt(self.ping, samples, window, len(rivals))
+        return refine(self.model, data, rivals, self.priors)
 
-    def settle(self, members: Sequence[int]) -> None:
-        """Refine members together."""
+    def refined_apart(self, objects: list[Objects]) -> list[Refined]:
+        """Single objects that do not overlap, each fitted to the residual around it."""
+        windows = [window_of(self.model, self.ping, one) for one in objects]
+        data = excerpts(self.ping, self.residual, windows)
+        return refine(self.model, data, objects, self.priors)
+
+    def settle(self, members: Sequence[int]) -> list[int]:
+        """Refine members together; returns their new numbers."""
         refined = self.refined(self.objects.take(members), self.alone(members), self.span(members))
-        self.replace(members, refined.objects, [self.rivals[i] for i in members])
+        return self.replace(members, refined, self.rivals(members))
 
     def silence_cost(self, samples: ComplexArray, window: slice) -> float:
         """Cost of explaining the samples by noise alone."""
@@ -116,7 +184,7 @@ class Scene:
 
     def misfit(self, i: int) -> float:
         """Excess of the residual around an object over what noise leaves, nats."""
-        window = self.windows[i]
+        window = self.items[i].window
         count = int(np.count_nonzero(self.ping.weight[:, window]))
         return self.silence_cost(self.residual, window) - count
 
@@ -129,8 +197,6 @@ class Explained:
     ----------
     gain
         shape (k,): nats that the ping's likelihood loses without the object.
-    covariance
-        shape (k, 3, 3) of (range, bearing, velocity) at the fitted place.
     threshold
         Gain that noise exceeds at the accepted rate.
     interference
@@ -139,11 +205,5 @@ class Explained:
 
     scene: Scene
     gain: FloatArray
-    covariance: FloatArray
     threshold: float
     interference: bool
-
-    @property
-    def objects(self) -> Objects:
-        """The objects."""
-        return self.scene.objects

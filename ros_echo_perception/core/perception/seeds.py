@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from functools import lru_cache
 
 import numpy as np
 
@@ -44,6 +45,7 @@ def find_candidates(
     return sorted(candidates, key=lambda c: c.strength, reverse=True)
 
 
+@lru_cache(maxsize=64)
 def matched_width_s(pulse: PulseTemplate) -> float:
     """Gaussian width of the pulse's envelope behind its own matched filter."""
     step = pulse.fine_step_s
