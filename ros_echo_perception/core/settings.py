@@ -152,7 +152,7 @@ def _checked(info: SettingInfo, value: Any) -> Any:
         raise SettingError(refuse(info.name, value, info.allowed()))
     if isinstance(value, float) and math.isnan(value):
         raise SettingError(refuse(info.name, value, info.allowed()))
-    if not isinstance(value, str | bool) and not _inside(info, value):
+    if isinstance(value, int | float) and not _inside(info, value):
         raise SettingError(refuse(info.name, value, info.allowed()))
     return value
 

@@ -189,7 +189,7 @@ class Detection:
     existence_probability: float
     range_bearing_covariance: float = 0.0
     alternatives: tuple[tuple[float, float], ...] = ()
-    """Other possible bearings as (bearing_rad, weight)."""
+    """All bearings left possible as (bearing_rad, weight), most likely first; empty: one only."""
     ears: Ears = Ears.BOTH
     envelope_sigma_s: float = math.nan
     envelope_decay_s: float = 0.0

@@ -21,12 +21,13 @@ from ..perception.objects import one_object
 from ..perception.pipeline import prepare
 from ..types import FloatArray, RawEcho
 from .direct import measure_direct_pulse
-from .observation import Observation, observe, residual, signal_share
+from .observation import Observation, level_mismatch, observe, residual, signal_share
 from .parameters import PARAMETERS, SIGMA, TEMPERATURE_ERROR, apply, values
 
 MIN_PINGS = 8
 LEAST_MODEL_ERROR = 0.015
 """What no fit to one pole can promise of other objects: surfaces colour an echo a little."""
+_LEAST_LEVEL_ERROR, _UNKNOWN_LEVEL_ERROR = 0.02, 0.1
 _HOLD_BACK_EVERY = 4
 _MIN_SNR = 10.0
 _CURVE_BEARINGS = np.radians(np.arange(-40.0, 41.0, 10.0))
@@ -170,6 +171,7 @@ def _finish(
         "temperature_c": round(float(np.nanmean(temperature)), 2),
         "burst_cycles": burst,
         "model_error": round(max(float(np.median(left_over)), LEAST_MODEL_ERROR), 4),
+        "level_error": round(_level_error(observations, head, air), 4),
         "sigma": {
             p.name: float(f"{s:.3g}") for p, s in zip(PARAMETERS, sigma.tolist(), strict=True)
         },
@@ -187,6 +189,15 @@ def _relative_misfit(observation: Observation, head: Head, temperature_error: fl
     noise = left.size / 2.0
     energy = signal_share(observation, head)
     return math.sqrt(max(float(left @ left) / 2.0 - noise, 0.0) / energy)
+
+
+def _level_error(observations: list[Observation], head: Head, temperature_error: float) -> float:
+    """Scatter of the ears' log level ratio about the model, over the pole's places."""
+    ratio = [level_mismatch(o, head, temperature_error) for o in observations]
+    known = [r for r in ratio if r is not None]
+    if len(known) < MIN_PINGS // 2:
+        return _UNKNOWN_LEVEL_ERROR
+    return max(float(np.sqrt(np.mean(np.square(known)))), _LEAST_LEVEL_ERROR)
 
 
 def _bearing_curve(head: Head, echo: RawEcho) -> list[list[float]]:

@@ -19,6 +19,7 @@ from ..types import ComplexArray, FloatArray, RawEcho
 _BEFORE_S, _AFTER_S = 0.5e-3, 1.9e-3
 _MODEL_ERROR = 0.01
 _DIRECT_END_S = 2.2e-3
+_CLEAR_NATS = 300.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -83,6 +84,21 @@ def signal_share(observation: Observation, head: Head) -> float:
     rendered, target = _rendered(observation, head, 0.0)
     energy = max(float(np.vdot(rendered, rendered).real), 1e-30)
     return float(abs(np.vdot(rendered, target)) ** 2) / energy
+
+
+def level_mismatch(
+    observation: Observation, head: Head, temperature_error_k: float
+) -> float | None:
+    """Log of the level ratio left / right, measured over modelled; None where noise decides."""
+    rendered, target = _rendered(observation, head, temperature_error_k)
+    heard = []
+    for part, signal in zip(np.split(target, 2), np.split(rendered, 2), strict=True):
+        energy = float(np.vdot(signal, signal).real)
+        match = abs(np.vdot(signal, part))
+        if energy <= 0.0 or match**2 < _CLEAR_NATS * energy:
+            return None
+        heard.append(match / energy)
+    return math.log(heard[0] / heard[1])
 
 
 def _rendered(

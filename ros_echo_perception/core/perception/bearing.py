@@ -1,8 +1,8 @@
 """What one ping says of an object's bearing: all cues at once, several peaks allowed.
 
 Level difference, envelope time difference and carrier phase difference all enter the coherent
-likelihood of both ears; the phase makes it a comb whose teeth are a wavelength over the
-baseline apart, and the other two weigh the teeth.
+likelihood of both ears. The phase makes it a comb whose teeth are a wavelength over the baseline
+apart; the other two, which vary slowly, weigh the teeth.
 """
 
 from __future__ import annotations
@@ -12,13 +12,14 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.special import i0e, i1e
 
 from ..types import FloatArray
 from .search import Scan
 
 _MIN_WEIGHT = 0.02
 _SURE_WEIGHT = 0.95
-_MAX_PEAKS = 5
+_MAX_PEAKS = 8
 
 
 @dataclass(frozen=True)
@@ -32,7 +33,8 @@ class BearingPosterior:
     interval_rad
         Holds about 95 % of the probability.
     alternatives
-        Other peaks as (bearing_rad, weight), most likely first.
+        All bearings that remain possible as (bearing_rad, weight), most likely first; empty
+        when one alone does.
     range_m, range_sigma_m
         Mean and standard deviation of the range over all bearings; NaN and 0 where not known.
     """
@@ -41,41 +43,48 @@ class BearingPosterior:
     sigma_rad: float
     interval_rad: tuple[float, float]
     alternatives: tuple[tuple[float, float], ...]
-    ambiguous: bool
     range_m: float = math.nan
     range_sigma_m: float = 0.0
 
+    @property
+    def ambiguous(self) -> bool:
+        """Whether several bearings remain."""
+        return bool(self.alternatives)
+
 
 def bearing_posterior(
-    found: Scan, fitted_bearing_rad: float, fitted_sigma_rad: float
+    found: Scan, fitted_bearing_rad: float, fitted_sigma_rad: float, level_error: float
 ) -> BearingPosterior:
     """Posterior over bearing from a scan of one object (all others taken off).
 
     Parameters
     ----------
     found : scan around the object's range.
-    fitted_bearing_rad, fitted_sigma_rad : the fit's local answer; it sharpens the peak that
-        it sits on, which the grid may be too coarse to resolve.
+    fitted_bearing_rad, fitted_sigma_rad : the fit's local answer, which sharpens its own tooth.
+    level_error : standard deviation of the ears' log level ratio that the head file leaves.
 
     Notes
     -----
-    The prior is uniform. Each local maximum of the range-integrated likelihood is a peak; its
-    weight is the probability around it. When one peak holds 95 % or more it alone is reported;
-    else the mean over all, which has the smallest expected squared error.
+    Integrated over the phase within a tooth, exp(gain) gives exp(aligned) I0(s) exp(-s) with s
+    the sharpness (von Mises), and a spread of about 1/sqrt(s) of phase. A ratio of levels that
+    is off by delta costs G delta^2 / 4 of a gain G; with an error of the head on top of the
+    noise the cost shrinks to 1 / (1 + G level_error^2 / 2) of it. When one tooth holds 95 % or
+    more it alone is reported; else the mean over all, which has the least expected squared
+    error.
     """
-    probability = _over_bearing(found)
-    peaks = _peaks(probability)
-    centre = np.array([found.bearing_rad[p] for p in peaks])
-    own = int(np.argmin(np.abs(centre - fitted_bearing_rad)))
-    basin = _basins(probability, peaks)
-    weight, mean, spread = _moments(probability, found.bearing_rad, basin, len(peaks))
-    mean[own] = fitted_bearing_rad
-    step = float(found.bearing_rad[1] - found.bearing_rad[0])
-    # A peak narrower than the grid has the width that the fit says, whatever the grid shows.
-    spread = np.where(spread < step, fitted_sigma_rad, np.maximum(spread, fitted_sigma_rad))
-    spread[own] = max(fitted_sigma_rad, spread[own] if spread[own] > step else 0.0)
-    range_m, range_sigma_m = _range_moments(found)
+    best_range = int(np.argmax(found.gain.max(axis=1)))
+    teeth = _teeth(found, best_range)
+    softening = 1.0 / (1.0 + 0.5 * max(float(teeth.log_weight.max()), 0.0) * level_error**2)
+    log_weight = (teeth.log_weight - teeth.log_weight.max()) * softening
+    weight = np.exp(log_weight) * teeth.width_rad
+    weight /= weight.sum()
+    mean, spread = teeth.bearing_rad, np.maximum(teeth.spread_rad, 1e-5)
+    own = int(np.argmin(np.abs(mean - fitted_bearing_rad)))
+    if abs(mean[own] - fitted_bearing_rad) < teeth.width_rad[own]:
+        mean[own] = fitted_bearing_rad
+        spread[own] = max(fitted_sigma_rad, spread[own])
     summary = _summary(weight, mean, spread)
+    range_m, range_sigma_m = _range_moments(found)
     return dataclasses.replace(summary, range_m=range_m, range_sigma_m=range_sigma_m)
 
 
@@ -88,62 +97,56 @@ def among_rivals(
     return _summary(weight, mean, np.full(mean.size, fitted_sigma_rad))
 
 
+@dataclass(frozen=True, eq=False)
+class _Teeth:
+    """Peaks of the comb: places, log weight density, distance of neighbours, spread; (n,)."""
+
+    bearing_rad: FloatArray
+    log_weight: FloatArray
+    width_rad: FloatArray
+    spread_rad: FloatArray
+
+
+def _teeth(found: Scan, i: int) -> _Teeth:
+    grid = found.bearing_rad
+    step = float(grid[1] - grid[0])
+    density = found.aligned[i] + np.log(np.maximum(i0e(found.sharpness[i]), 1e-300))
+    lobes = found.lobes(i)
+    if lobes.size < 2 or float(found.sharpness[i].max()) < 1.0:
+        # One ear only: no phase to compare, every bearing of the grid stands for itself.
+        return _Teeth(grid.copy(), density, np.full(grid.size, step), np.full(grid.size, step))
+    turn = np.abs(np.angle(np.exp(1j * np.diff(found.phase_rad[i])))) / step
+    slope = np.maximum(np.interp(lobes, grid[:-1] + step / 2.0, turn), 1e-3)
+    sharpness = np.interp(lobes, grid, found.sharpness[i])
+    # Variance of the von Mises distribution, bounded by that of the uniform one.
+    resultant = i1e(sharpness) / i0e(sharpness)
+    phase_variance = np.minimum(-2.0 * np.log(np.maximum(resultant, 1e-3)), math.pi**2 / 3.0)
+    return _Teeth(
+        bearing_rad=lobes,
+        log_weight=np.interp(lobes, grid, density),
+        width_rad=np.minimum(2.0 * math.pi / slope, grid[-1]),
+        spread_rad=np.sqrt(phase_variance) / slope,
+    )
+
+
 def _range_moments(found: Scan) -> tuple[float, float]:
-    weight = np.exp(found.gain - found.gain.max()).sum(axis=1)
+    gain = found.gain
+    weight = np.exp(gain - gain.max()).sum(axis=1)
     weight = weight / weight.sum()
     mean = float(weight @ found.range_m)
     return mean, math.sqrt(float(weight @ (found.range_m - mean) ** 2))
 
 
-def _over_bearing(found: Scan) -> FloatArray:
-    log = found.gain - found.gain.max()
-    probability = np.exp(log).sum(axis=0)
-    return np.asarray(probability / probability.sum())
-
-
-def _peaks(probability: FloatArray) -> list[int]:
-    padded = np.concatenate(([-1.0], probability, [-1.0]))
-    inner = (padded[1:-1] >= padded[:-2]) & (padded[1:-1] > padded[2:])
-    index = np.nonzero(inner)[0]
-    strongest = index[np.argsort(probability[index])[::-1][: 4 * _MAX_PEAKS]]
-    return [int(i) for i in np.sort(strongest)]
-
-
-def _basins(probability: FloatArray, peaks: list[int]) -> np.ndarray:
-    """Number of the peak to which each bearing belongs (split at the lowest point between)."""
-    basin = np.zeros(probability.size, np.intp)
-    for number, (a, b) in enumerate(zip(peaks[:-1], peaks[1:], strict=True)):
-        valley = a + int(np.argmin(probability[a : b + 1]))
-        basin[valley:] = number + 1
-    return basin
-
-
-def _moments(
-    probability: FloatArray, bearing_rad: FloatArray, basin: np.ndarray, count: int
-) -> tuple[FloatArray, FloatArray, FloatArray]:
-    weight = np.bincount(basin, probability, count)
-    safe = np.maximum(weight, 1e-300)
-    mean = np.bincount(basin, probability * bearing_rad, count) / safe
-    second = np.bincount(basin, probability * (bearing_rad - mean[basin]) ** 2, count) / safe
-    return weight, mean, np.sqrt(second)
-
-
 def _summary(weight: FloatArray, mean: FloatArray, spread: FloatArray) -> BearingPosterior:
     order = np.argsort(weight)[::-1]
     top = int(order[0])
-    sure = weight[top] >= _SURE_WEIGHT
+    sure = bool(weight[top] >= _SURE_WEIGHT)
     centre = float(mean[top]) if sure else float(weight @ mean)
-    variance = float(weight @ (spread**2 + (mean - centre) ** 2))
-    ambiguous = not sure
-    alternatives = tuple(
-        (float(mean[i]), float(weight[i]))
-        for i in order
-        if i != top and weight[i] >= _MIN_WEIGHT
-    )[:_MAX_PEAKS]
-    sigma = math.sqrt(variance)
+    sigma = math.sqrt(float(weight @ (spread**2 + (mean - centre) ** 2)))
     significant = np.cumsum(weight[order]) - weight[order] < 0.95
     low = float(np.min((mean - 1.96 * spread)[order][significant]))
     high = float(np.max((mean + 1.96 * spread)[order][significant]))
-    return BearingPosterior(
-        centre, sigma, (low, high), alternatives if ambiguous else (), ambiguous
-    )
+    alternatives = tuple(
+        (float(mean[i]), float(weight[i])) for i in order if weight[i] >= _MIN_WEIGHT
+    )[:_MAX_PEAKS]
+    return BearingPosterior(centre, sigma, (low, high), () if sure else alternatives)

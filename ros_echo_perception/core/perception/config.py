@@ -15,7 +15,7 @@ class ProcessingConfig(Settings):
         8.0, "Echoes beyond this range are not looked for", "m", 0.3, 30.0
     )
     max_bearing_rad: float = setting(
-        1.22, "Bearings are looked for from minus to plus this angle", "rad", 0.2, 1.57
+        1.9, "Bearings are looked for from minus to plus this angle", "rad", 0.2, 2.4
     )
     false_detections_per_ping: float = setting(
         0.01, "Accepted rate of plain noise taken for an echo", "1/ping", 1e-6, 1.0

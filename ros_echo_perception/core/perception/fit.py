@@ -71,6 +71,7 @@ class ObjectFitter:
         self.range_min_m = range_min(model, ping)
         self.scene = Scene(model, ping, Priors(config.velocity_sigma_m_s, config.max_bearing_rad))
         self.interference = False
+        self._lobe_rad = model.speed_m_s / model.receiver.carrier_hz / model.head.baseline_m
         self._reach_m = model.speed_m_s * model.pulses[0].envelope_sigma_s
 
     def fit(self, candidates: list[Candidate]) -> Explained:
@@ -173,16 +174,13 @@ class ObjectFitter:
             if len(self.scene.cluster(i)) == 1:
                 continue
             one = self.scene.objects.take([i])
+            here, width = float(one.range_m[0]), _RESEARCH_HALF_WIDTH_M
             samples = self.scene.alone([i])
-            width = _RESEARCH_HALF_WIDTH_M
-            found = scan(
-                self.model, self.ping, samples, float(one.range_m[0]), width, self.bearings
-            )
-            best_range, best_bearing, strength, gain = found.best()
-            here = int(np.argmin(np.abs(self.bearings - one.bearing_rad[0])))
-            near = slice(max(here - 2, 0), here + 3)
-            if gain > float(found.gain[:, near].max()) + _SWITCH_NATS:
-                self._try_instead([i], one_object(best_range, best_bearing, strength), 0.0)
+            found = scan(self.model, self.ping, samples, here, width, self.bearings)
+            best_range, best_bearing, strength, _ = found.best()
+            if abs(best_bearing - float(one.bearing_rad[0])) > self._lobe_rad / 2.0:
+                other = one_object(best_range, best_bearing, strength)
+                self._try_instead([i], other, _SWITCH_NATS)
 
     def _reconsider_close(self) -> None:
         """Close objects: perhaps one explains both (one repaired the other's slip), or a better

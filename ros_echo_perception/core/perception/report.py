@@ -7,6 +7,7 @@ import math
 import numpy as np
 
 from ..air import speed_of_sound
+from ..head import Head
 from ..types import Detection, DetectionFlag, Ears, FloatArray
 from .bearing import BearingPosterior, among_rivals, bearing_posterior
 from .conditioning import Conditioned
@@ -17,6 +18,8 @@ from .scene import Explained, Scene
 from .search import bearing_grid, scan
 
 _POSTERIOR_HALF_WIDTH_M = 0.012
+_NOMINAL_LEVEL_ERROR = 0.2
+"""1.5 dB between the ears (log ratio 0.17) and 1.5 degrees of yaw: usual tolerances."""
 _HEARD_DB = 8.0
 """An ear hears an echo from this SNR on; below, noise reaches it now and then."""
 
@@ -80,7 +83,13 @@ def _posterior(scene: Scene, i: int, bearings: FloatArray) -> BearingPosterior:
     if found is None:
         width = _POSTERIOR_HALF_WIDTH_M
         found = scan(scene.model, scene.ping, scene.alone([i]), range_m, width, bearings)
-    return bearing_posterior(found, float(scene.objects.bearing_rad[i]), sigma)
+    bearing_rad = float(scene.objects.bearing_rad[i])
+    return bearing_posterior(found, bearing_rad, sigma, level_error(scene.model.head))
+
+
+def level_error(head: Head) -> float:
+    """Standard deviation of the log level ratio of the ears that a head file leaves."""
+    return float(head.calibration.get("level_error", _NOMINAL_LEVEL_ERROR))
 
 
 def _range_sigma(

@@ -14,7 +14,7 @@ from .model import HeadModel
 
 _FINE = 8
 _RANGE_STEP_M = 4e-3
-_PHASE_STEPS = 10
+_PHASE_STEPS = 7
 
 
 def matched_filter(model: HeadModel, ping: Conditioned, samples: ComplexArray) -> FloatArray:
@@ -45,7 +45,7 @@ def matched_filter(model: HeadModel, ping: Conditioned, samples: ComplexArray) -
 
 
 def bearing_grid(model: HeadModel, max_bearing_rad: float) -> FloatArray:
-    """Bearings fine enough that no lobe of the carrier's phase falls between two."""
+    """Bearings so dense that the ears' phase difference turns by less than a sixth between."""
     wavelength_m = model.speed_m_s / model.receiver.carrier_hz
     step = wavelength_m / max(model.head.baseline_m, wavelength_m) / _PHASE_STEPS
     count = int(math.ceil(max_bearing_rad / step))
@@ -54,25 +54,62 @@ def bearing_grid(model: HeadModel, max_bearing_rad: float) -> FloatArray:
 
 @dataclass(frozen=True, eq=False)
 class Scan:
-    """Log-likelihood gain (nats) of one object over range and bearing.
+    """One object tried at all places near a range; arrays of shape (n_range, n_bearing).
 
-    ``gain`` has shape (n_range, n_bearing) and includes the log prior of the bearing;
-    ``strength`` is the best complex strength there.
+    Attributes
+    ----------
+    aligned
+        Log-likelihood gain (nats) if the carrier phases of both ears agreed there, log prior
+        of the bearing included. It varies slowly over bearing: level and delay differences.
+    phase_rad
+        By how much the phase of the right ear's match leads the left one's, against the model:
+        0 where the carriers agree.
+    sharpness
+        What the gain loses to the phases is sharpness * (1 - cos(phase)), nats.
+    strength
+        Complex strength of the best object there, if the phases agreed.
     """
 
     range_m: FloatArray
     bearing_rad: FloatArray
-    gain: FloatArray
+    aligned: FloatArray
+    phase_rad: FloatArray
+    sharpness: FloatArray
     strength: ComplexArray
 
+    @property
+    def gain(self) -> FloatArray:
+        """Log-likelihood gain of one object, phases included, nats."""
+        return np.asarray(self.aligned - self.sharpness * (1.0 - np.cos(self.phase_rad)))
+
     def best(self) -> tuple[float, float, complex, float]:
-        """Range, bearing, strength and gain of the best place."""
-        i, j = np.unravel_index(int(np.argmax(self.gain)), self.gain.shape)
-        return (
-            float(self.range_m[i]),
-            float(self.bearing_rad[j]),
-            complex(self.strength[i, j]),
-            float(self.gain[i, j]),
+        """Range, bearing, strength and gain of the best place.
+
+        Between two bearings of the grid the phase passes 0 or not; where it does, the gain is
+        the aligned one, however far the grid's own bearings are from the lobe's top.
+        """
+        i = int(np.argmax(self.gain.max(axis=1)))
+        lobes = self.lobes(i)
+        gain = np.interp(lobes, self.bearing_rad, self.aligned[i])
+        if lobes.size == 0 or self.gain[i].max() > gain.max():
+            j = int(np.argmax(self.gain[i]))
+            bearing, top = float(self.bearing_rad[j]), float(self.gain[i, j])
+        else:
+            k = int(np.argmax(gain))
+            bearing, top = float(lobes[k]), float(gain[k])
+            j = int(np.argmin(np.abs(self.bearing_rad - bearing)))
+        return float(self.range_m[i]), bearing, complex(self.strength[i, j]), top
+
+    def lobes(self, i: int) -> FloatArray:
+        """Bearings at which the carriers of both ears agree, for one range."""
+        phase = self.phase_rad[i]
+        turn = np.angle(np.exp(1j * np.diff(phase)))
+        # The phase wraps at +-pi; a step that crosses 0 keeps its size when unwrapped.
+        crosses = (phase[:-1] * (phase[:-1] + turn) <= 0.0) & (np.abs(phase[:-1]) < math.pi / 2)
+        at = np.nonzero(crosses & (turn != 0.0))[0]
+        share = -phase[at] / turn[at]
+        return np.asarray(
+            self.bearing_rad[at] + share * (self.bearing_rad[at + 1] - self.bearing_rad[at])
         )
 
 
@@ -84,33 +121,40 @@ def scan(
     half_width_m: float,
     bearing_rad: FloatArray,
 ) -> Scan:
-    """Gain of one object near a range for all bearings, both ears coherent.
+    """Try one object near a range at all bearings, both ears coherent.
 
     Notes
     -----
     gain = |sum_e g_e conj(phase_e) b_e|^2 / sum_e g_e^2 e_e with b and e the weighted match and
     energy of the pulse at each ear's delay: the likelihood ratio of one object of unknown
-    complex strength in Gaussian noise. The prior of a bearing is proportional to the better
-    ear's gain: an object far off the beams must be so much stronger to be heard.
+    complex strength in Gaussian noise. With m_e the two terms of the sum it is
+    (|m_L| + |m_R|)^2 less 2 |m_L| |m_R| (1 - cos phase), over the energy. The prior of a bearing
+    is proportional to the better ear's gain: an object far off the beams must be so much
+    stronger to be heard.
     """
     steps = max(1, int(round(half_width_m / _RANGE_STEP_M)))
     offset_m = np.linspace(-half_width_m, half_width_m, 2 * steps + 1)
     geometry = model.geometry(np.full(bearing_rad.shape, range_m), bearing_rad)
     shift_s = 2.0 * offset_m / model.speed_m_s
-    match = np.zeros((offset_m.size, bearing_rad.size), complex)
-    energy = np.zeros((offset_m.size, bearing_rad.size))
-    phase = model.carrier(geometry).conj()
-    for ear in range(2):
-        delay = geometry.delay_s[ear]
-        b, e = _correlate(
-            model, ping, samples, ear, delay[None, :] + shift_s[:, None]
-        )
-        match += geometry.gain[ear] * phase[ear] * b
-        energy += geometry.gain[ear] ** 2 * e
+    factor = geometry.gain * model.carrier(geometry).conj()
+    (left, left_energy), (right, right_energy) = (
+        _correlate(model, ping, samples, ear, geometry.delay_s[ear] + shift_s[:, None])
+        for ear in range(2)
+    )
+    left, right = factor[0] * left, factor[1] * right
+    energy = geometry.gain[0] ** 2 * left_energy + geometry.gain[1] ** 2 * right_energy
     safe = np.maximum(energy, 1e-30)
     prior = np.log(np.maximum(geometry.gain.max(axis=0), 1e-3))
-    gain = np.abs(match) ** 2 / safe + prior
-    return Scan(range_m + offset_m, bearing_rad, gain, match / safe)
+    size = np.abs(left) + np.abs(right)
+    phase = np.angle(right * left.conj())
+    return Scan(
+        range_m=range_m + offset_m,
+        bearing_rad=bearing_rad,
+        aligned=size**2 / safe + prior,
+        phase_rad=phase,
+        sharpness=2.0 * np.abs(left) * np.abs(right) / safe,
+        strength=size * np.exp(1j * (np.angle(left) + 0.5 * phase)) / safe,
+    )
 
 
 def _correlate(
