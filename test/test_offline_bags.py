@@ -1,7 +1,10 @@
 """Bags: what is written is read back by an independent reader, bit for bit."""
 
+import json
+import os
 import struct
 from array import array
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -265,3 +268,21 @@ def test_messages_serialized_by_ros_are_read_without_ros(tmp_path):
     assert (echo.sequence, echo.burst_cycles, echo.full_scale) == (9, 8.0, 2048.0)
     assert echo.emission_time_s == 77.25
     np.testing.assert_array_equal(echo.samples, np.arange(128).reshape(2, 64))
+
+
+@pytest.mark.ros
+@pytest.mark.parametrize(
+    "name", ["RawEcho", "EchoDetection", "EchoDetectionArray", "FittedEnvelope"]
+)
+def test_type_hashes_are_those_of_the_ros_build(name):
+    """REP-2011 type hashes, computed by rosbags from msg/ and by rosidl when it was built."""
+    prefixes = os.environ.get("AMENT_PREFIX_PATH", "").split(os.pathsep)
+    paths = [Path(p) / f"share/ros_echo_perception/msg/{name}.json" for p in prefixes if p]
+    built = next((path for path in paths if path.exists()), None)
+    if built is None:
+        pytest.skip("the messages are not built here")
+    full = f"ros_echo_perception/msg/{name}"
+    hashes = {
+        h["type_name"]: h["hash_string"] for h in json.loads(built.read_text())["type_hashes"]
+    }
+    assert typestore().hash_rihs01(full) == hashes[full]
