@@ -19,7 +19,7 @@ from . import detections_csv
 from .console import output, progress_bar, quantile, table
 from .heads import head_for, load_heads
 from .inputs import EchoInput, open_input
-from .options import config_option, head_option, need_something, out_option
+from .options import config_option, head_option, need_something, out_option, topic_option
 from .settings_file import load_settings, save_used, settings_path
 
 
@@ -62,10 +62,10 @@ def process(
 
 def detect_all(
     paths: Sequence[Path], heads: Mapping[str, Head], config: ProcessingConfig,
-    progress: Progress | None = None,
+    progress: Progress | None = None, topic: str = "",
 ) -> list[DetectOutcome]:  # fmt: skip
     """Process several inputs; all of them are checked before the first is processed."""
-    sources = [open_input(path) for path in paths]
+    sources = [open_input(path, topic) for path in paths]
     matched = [head_for(heads, source.head_name, str(source.path)) for source in sources]
     return [
         process(source, head, config, progress)
@@ -77,10 +77,12 @@ def detect_all(
 @click.argument("recordings", nargs=-1, required=True, type=click.Path(path_type=Path))
 @head_option(multiple=True)
 @out_option("Table of detections (CSV).")
+@topic_option
 @config_option
 def detect_command(
-    recordings: tuple[Path, ...], heads: tuple[Path, ...], out: Path, config: Path | None
-) -> None:
+    recordings: tuple[Path, ...], heads: tuple[Path, ...], out: Path, topic: str,
+    config: Path | None,
+) -> None:  # fmt: skip
     """Find the echoes in recordings.
 
     RECORDING is a .wav with its .json beside it, or a rosbag2 folder with raw echoes. Recordings
@@ -96,7 +98,7 @@ def detect_command(
     """
     settings = load_settings(config, "processing", ProcessingConfig)
     with progress_bar() as progress:
-        outcomes = detect_all(recordings, load_heads(heads), settings, progress)
+        outcomes = detect_all(recordings, load_heads(heads), settings, progress, topic)
     need_something(sum(len(outcome.results) for outcome in outcomes), "ping")
     out.parent.mkdir(parents=True, exist_ok=True)
     detections_csv.write(out, (row for outcome in outcomes for row in outcome.rows()))

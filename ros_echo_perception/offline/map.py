@@ -32,7 +32,7 @@ from .console import output, progress_bar, table
 from .detect import DetectOutcome, process
 from .heads import head_for, load_heads
 from .inputs import EchoInput, open_input
-from .options import config_option, head_option, need_something, out_option
+from .options import config_option, head_option, need_something, out_option, topic_option
 from .plots import OCCUPIED_FROM, MapPicture, save_map_picture
 from .settings_file import load_settings, save_used, settings_path
 
@@ -173,7 +173,7 @@ def placed_detections(
     show_default=True,
     help="Size of the map: the whole drive, or as in the settings.",
 )
-@click.option("--topic", default="", help="Topic of the raw echoes, for a bag with several.")
+@topic_option
 @config_option
 def map_command(
     recording: Path, head: Path, out: Path, picture: Path | None,

@@ -60,6 +60,9 @@ def out_option(text: str) -> Callable[[F], F]:
     )
 
 
+topic_option = click.option(
+    "--topic", default="", help="Topic of the raw echoes, for a bag with several."
+)
 config_option = click.option(
     "--config",
     type=click.Path(path_type=Path),
