@@ -9,8 +9,9 @@ from echo_data import ROOT
 from ros_echo_perception.core.head import load_head
 from ros_echo_perception.core.perception.baseband import receiver_filter
 from ros_echo_perception.core.perception.conditioning import Conditioned
-from ros_echo_perception.core.perception.joint import Objects, Priors, signals
+from ros_echo_perception.core.perception.joint import Priors, excerpt, refine, signals, window_of
 from ros_echo_perception.core.perception.model import HeadModel
+from ros_echo_perception.core.perception.objects import Objects
 from ros_echo_perception.core.types import PingFlag, RawEcho
 from ros_echo_perception.sources.bench import bench_source, poles
 from ros_echo_perception.sources.simulator_config import SimulatorConfig
@@ -65,6 +66,12 @@ def strength_for(model, range_m, bearing_rad, energy_snr_db):
     time_s = 2.0 * range_m / SPEED + step * np.arange(-200, 600)
     energy = 2.0 * float(np.sum(np.abs(signals(model, one, time_s).value) ** 2))
     return math.sqrt(10.0 ** (energy_snr_db / 10.0) / energy)
+
+
+def fit(model, ping, start, priors=STILL):
+    """The refined objects of a ping, started somewhere."""
+    data = excerpt(ping, ping.samples, window_of(model, ping, start))
+    return refine(model, data, [start], priors)[0]
 
 
 def simulated(places, head=HEAD, n=1, radius_m=0.02, **config):
