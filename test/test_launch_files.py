@@ -1,4 +1,4 @@
-"""Launch files, read without the launch library: what they name exists, their arguments are used."""
+"""Launch files, read without the launch library: what they name exists and is used."""
 
 import re
 import xml.etree.ElementTree as ET

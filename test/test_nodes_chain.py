@@ -181,7 +181,7 @@ def distance(grid, point):
 
 
 def read_pgm(path):
-    """An independent reader of binary PGM (netpbm's pgm(5): magic, width, height, maxval, raster)."""
+    """An independent reader of binary PGM (netpbm, pgm(5): magic, size, maximum, raster)."""
     magic, size, maxval, raster = path.read_bytes().split(b"\n", 3)
     assert (magic, maxval) == (b"P5", b"255")
     width, height = map(int, size.split())

@@ -9,14 +9,7 @@ pytest.importorskip("rclpy")
 pytestmark = [pytest.mark.ros, pytest.mark.filterwarnings("ignore::DeprecationWarning")]
 
 from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus  # noqa: E402
-from nav_msgs.msg import OccupancyGrid, Odometry  # noqa: E402
 
-from ros_echo_perception.core.types import (  # noqa: E402
-    Detection,
-    OdometrySample,
-    PingResult,
-    Pose2,
-)
 from ros_echo_perception.core.types import RawEcho as CoreEcho  # noqa: E402
 from ros_echo_perception.msg import EchoDetectionArray, RawEcho  # noqa: E402
 from ros_echo_perception.nodes import conversion  # noqa: E402
@@ -157,63 +150,3 @@ def test_a_driver_without_recording_says_what_to_give(start_node, tmp_path):
         assert node.exit_code() == 1
         assert text in node.text
         assert "Traceback" not in node.text
-
-
-def ping(time_s):
-    echo = Detection(
-        1.0, 0.0, 0.005, 0.02, -0.04, 0.04, (0.1, 0.1), (30.0, 30.0), 0.99, envelope_sigma_s=1e-4
-    )
-    result = PingResult(time_s, 0, (echo,), 343.0, 0.2, 5.0, 0.5, (1e-3, 1e-3))
-    msg = conversion.result_to_msg(result, raw_message(0).header, 0.0)
-    msg.header.stamp = conversion.stamp(time_s)
-    return msg
-
-
-def test_mapping_skips_pings_without_odometry_and_never_guesses(start_node, peer):
-    grids = peer.collect(OccupancyGrid, "map", 5)
-    states = peer.collect(DiagnosticArray, "/diagnostics")
-    pings = peer.node.create_publisher(EchoDetectionArray, "detections", 50)
-    odometry = peer.node.create_publisher(Odometry, "odom", 50)
-    start_node("mapping", {"diagnostics_period_s": 0.2, "publish_period_s": 0.1})
-    peer.wait_for(
-        lambda: pings.get_subscription_count() and odometry.get_subscription_count(), "it"
-    )
-
-    def state(name):
-        return (peer.diagnostics(states, "mapping") or {}).get(name)
-
-    for k in range(20):
-        pings.publish(ping(T0_S + 0.1 * k))
-    peer.wait_for(lambda: int(state("skipped_no_odometry") or 0) >= 5, "skipped pings")
-    assert state("fused") is None
-    assert all(np.all(np.array(g.data) == -1) for g in grids)
-
-    # With odometry around them the next pings are mapped, at the pose of their emission.
-    start_s = T0_S + 10.0
-    for k in range(40):
-        sample = OdometrySample(start_s + 0.02 * k, Pose2(0.0, 0.02 * k, 0.0))
-        stamp = conversion.stamp(sample.time_s)
-        odometry.publish(conversion.odometry_to_msg(sample, stamp, "odom", "base_link"))
-    for k in range(10):
-        pings.publish(ping(start_s + 0.05 * k))
-    peer.wait_for(lambda: int(state("fused") or 0) >= 8, "mapped pings")
-
-    def hit():
-        grid = grids[-1]
-        cells = np.array(grid.data).reshape(grid.info.height, grid.info.width)
-        row, column = np.nonzero(cells > 50)
-        x = grid.info.origin.position.x + (column + 0.5) * grid.info.resolution
-        y = grid.info.origin.position.y + (row + 0.5) * grid.info.resolution
-        return len(x) and np.all(np.abs(x - 1.12) < 0.1) and y.min() > -0.15 and y.max() < 0.65
-
-    peer.wait_for(hit, "cells 1 m in front of the head along its way")
-
-    bad = ping(start_s + 0.6)
-    bad.detections[0].range_m = math.nan
-    pings.publish(bad)
-    wrong = conversion.odometry_to_msg(
-        OdometrySample(start_s + 1.0, Pose2()), conversion.stamp(start_s + 1.0), "map", "base_link"
-    )
-    odometry.publish(wrong)
-    peer.wait_for(lambda: state("dropped: invalid message") == "1", "the bad ping")
-    peer.wait_for(lambda: state("odometry dropped") == "1", "the odometry of another frame")

@@ -11,6 +11,7 @@ from ..core.perception.config import ProcessingConfig
 from ..core.perception.scan import ScanConfig
 from ..core.settings import Settings, setting
 from ..core.types import Pose2
+from ..sources.factory import KINDS
 from ..sources.simulator_config import SimulatorConfig
 
 
@@ -21,7 +22,7 @@ class DriverSettings(Settings):
     source: str = setting(
         "simulator",
         "Where raw echoes come from",
-        choices=("simulator", "recording"),
+        choices=KINDS,
     )
     head_file: str = setting(
         "sparrow_52.yaml",

@@ -4,15 +4,12 @@ from __future__ import annotations
 
 from pathlib import Path
 
-from ..core.errors import FileFormatError, SourceError, refuse
+from ..core.errors import FileFormatError
 from ..core.head import load_head
 from ..offline.resources import shipped
 from ..sources.base import EchoSource
-from ..sources.recording import RecordingSource, load_recording
-from ..sources.robot_path import load_path
-from ..sources.simulator import SimulatorSource
+from ..sources.factory import open_source
 from ..sources.simulator_config import SimulatorConfig
-from ..sources.world import load_world
 from .settings import DriverSettings
 
 DEMO_WORLD = "config/worlds/demo_room.yaml"
@@ -46,13 +43,12 @@ def open_configured(settings: DriverSettings, simulator: SimulatorConfig) -> Ech
     SourceError, FileFormatError
         When it cannot be opened, with the file, field and value at fault.
     """
-    if settings.source == "recording":
-        return RecordingSource(load_recording(settings.recording), settings.start_offset_s)
-    if settings.start_offset_s > 0.0:
-        raise SourceError(
-            refuse("start_offset_s", settings.start_offset_s, "0 with the simulator",
-                   "use it with recordings")
-        )  # fmt: skip
-    world = Path(settings.world_file) if settings.world_file else shipped(DEMO_WORLD)
-    head = load_head(find_head_file(settings.head_file))
-    return SimulatorSource(head, load_world(world), load_path(world), simulator)
+    simulated = settings.source == "simulator"
+    return open_source(
+        settings.source,
+        head=load_head(find_head_file(settings.head_file)) if simulated else None,
+        world_file=settings.world_file or shipped(DEMO_WORLD),
+        recording=settings.recording,
+        config=simulator,
+        start_offset_s=settings.start_offset_s,
+    )

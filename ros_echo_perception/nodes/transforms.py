@@ -11,7 +11,7 @@ from rclpy.time import Time
 
 from ..core.errors import SettingError, refuse
 from ..core.types import Pose2
-from .qos import create_publisher
+from .qos import create_publisher, message_class
 from .topics import TF, TF_STATIC
 
 
@@ -30,12 +30,11 @@ class TransformSender:
 
     def __init__(self, node: Node) -> None:
         try:
-            from tf2_msgs.msg import TFMessage
+            self._message = message_class(TF)
         except ImportError:
             self._message = None
             node.get_logger().info("tf2_msgs is not installed: no TF is published")
             return
-        self._message = TFMessage
         self._moving = create_publisher(node, TF)
         self._static = create_publisher(node, TF_STATIC)
 

@@ -75,7 +75,7 @@ def points_to_msg(result: PingResult, header: Any) -> PointCloud2:
         point["ears"], point["flags"] = int(echo.ears), int(echo.flags)
     fields = [
         PointField(name=name, offset=offset, datatype=_DATATYPE[kind], count=1)
-        for name, (kind, offset) in (POINT.fields or {}).items()
+        for name, (kind, offset, *_) in (POINT.fields or {}).items()
     ]
     return PointCloud2(
         header=header,
