@@ -35,15 +35,14 @@ class BearingPosterior:
     alternatives
         All bearings that remain possible as (bearing_rad, weight), most likely first; empty
         when one alone does.
-    range_m, range_sigma_m
-        Mean and standard deviation of the range over all bearings; NaN and 0 where not known.
+    range_sigma_m
+        Standard deviation of the range over all bearings; 0 where not known.
     """
 
     bearing_rad: float
     sigma_rad: float
     interval_rad: tuple[float, float]
     alternatives: tuple[tuple[float, float], ...]
-    range_m: float = math.nan
     range_sigma_m: float = 0.0
 
     @property
@@ -72,8 +71,7 @@ def bearing_posterior(
     more it alone is reported; else the mean over all, which has the least expected squared
     error.
     """
-    best_range = int(np.argmax(found.gain.max(axis=1)))
-    teeth = _teeth(found, best_range)
+    teeth = _teeth(found)
     softening = 1.0 / (1.0 + 0.5 * max(float(teeth.log_weight.max()), 0.0) * level_error**2)
     log_weight = (teeth.log_weight - teeth.log_weight.max()) * softening
     weight = np.exp(log_weight) * teeth.width_rad
@@ -84,17 +82,24 @@ def bearing_posterior(
         mean[own] = fitted_bearing_rad
         spread[own] = max(fitted_sigma_rad, spread[own])
     summary = _summary(weight, mean, spread)
-    range_m, range_sigma_m = _range_moments(found)
-    return dataclasses.replace(summary, range_m=range_m, range_sigma_m=range_sigma_m)
+    return dataclasses.replace(summary, range_sigma_m=found.range_sigma_m)
 
 
 def among_rivals(
     rivals: tuple[tuple[float, float], ...], fitted_sigma_rad: float
 ) -> BearingPosterior:
-    """Posterior from several equally likely explanations, as (bearing_rad, weight)."""
+    """Posterior from several likely explanations of a ping, as (bearing_rad, weight), best first.
+
+    They differ in more than this object, so their mean explains nothing: the best one is
+    reported, with the scatter of all about it.
+    """
     mean = np.array([bearing for bearing, _ in rivals])
     weight = np.array([share for _, share in rivals])
-    return _summary(weight, mean, np.full(mean.size, fitted_sigma_rad))
+    summary = _summary(weight, mean, np.full(mean.size, fitted_sigma_rad))
+    offset = mean[0] - summary.bearing_rad
+    return dataclasses.replace(
+        summary, bearing_rad=float(mean[0]), sigma_rad=math.hypot(summary.sigma_rad, offset)
+    )
 
 
 @dataclass(frozen=True, eq=False)
@@ -107,17 +112,17 @@ class _Teeth:
     spread_rad: FloatArray
 
 
-def _teeth(found: Scan, i: int) -> _Teeth:
+def _teeth(found: Scan) -> _Teeth:
     grid = found.bearing_rad
     step = float(grid[1] - grid[0])
-    density = found.aligned[i] + np.log(np.maximum(i0e(found.sharpness[i]), 1e-300))
-    lobes = found.lobes(i)
-    if lobes.size < 2 or float(found.sharpness[i].max()) < 1.0:
+    density = found.aligned + np.log(np.maximum(i0e(found.sharpness), 1e-300))
+    lobes = found.lobes()
+    if lobes.size < 2 or float(found.sharpness.max()) < 1.0:
         # One ear only: no phase to compare, every bearing of the grid stands for itself.
         return _Teeth(grid.copy(), density, np.full(grid.size, step), np.full(grid.size, step))
-    turn = np.abs(np.angle(np.exp(1j * np.diff(found.phase_rad[i])))) / step
+    turn = np.abs(np.angle(np.exp(1j * np.diff(found.phase_rad)))) / step
     slope = np.maximum(np.interp(lobes, grid[:-1] + step / 2.0, turn), 1e-3)
-    sharpness = np.interp(lobes, grid, found.sharpness[i])
+    sharpness = np.interp(lobes, grid, found.sharpness)
     # Variance of the von Mises distribution, bounded by that of the uniform one.
     resultant = i1e(sharpness) / i0e(sharpness)
     phase_variance = np.minimum(-2.0 * np.log(np.maximum(resultant, 1e-3)), math.pi**2 / 3.0)
@@ -127,14 +132,6 @@ def _teeth(found: Scan, i: int) -> _Teeth:
         width_rad=np.minimum(2.0 * math.pi / slope, grid[-1]),
         spread_rad=np.sqrt(phase_variance) / slope,
     )
-
-
-def _range_moments(found: Scan) -> tuple[float, float]:
-    gain = found.gain
-    weight = np.exp(gain - gain.max()).sum(axis=1)
-    weight = weight / weight.sum()
-    mean = float(weight @ found.range_m)
-    return mean, math.sqrt(float(weight @ (found.range_m - mean) ** 2))
 
 
 def _summary(weight: FloatArray, mean: FloatArray, spread: FloatArray) -> BearingPosterior:

@@ -11,7 +11,7 @@ from ..types import FloatArray
 from .conditioning import Conditioned
 from .config import ProcessingConfig
 from .interference import find_click, is_click
-from .joint import Priors, window_of
+from .joint import Priors, Refined, signals, window_of
 from .model import HeadModel
 from .objects import Objects, one_object
 from .pairing import Candidate
@@ -27,7 +27,8 @@ _RIVAL_NATS = 4.0
 _EXTRA_ROUNDS = 12
 _MISFIT_SHARE = 0.7
 """A pair must gain a threshold; one object that leaves much less than that needs no look."""
-_MAX_LOOKS = 3
+_MAX_LOOKS = 2
+_LOBES_TRIED = 3
 _SURE_FACTOR = 6.0
 """An object whose linearised loss is this many thresholds needs no refit without it."""
 
@@ -196,10 +197,11 @@ class ObjectFitter:
     def _drop_weak(self) -> Explained:
         """Drop what the likelihood does not miss, weakest first; measure what stays."""
         scene = self.scene
-        unsettled = [m for m in scene.clusters() if not scene.settled(m)]
-        while unsettled:
-            scene.settle(unsettled[0])
-            unsettled = [m for m in scene.clusters() if not scene.settled(m)]
+        for _ in range(len(scene)):
+            unsettled = [i for i in range(len(scene)) if not scene.settled(i)]
+            if not unsettled:
+                break
+            scene.settle(scene.cluster(unsettled[0]))
         gain = self._gains()
         while gain.size and gain.min() < self.threshold:
             weakest = int(np.argmin(gain))
@@ -266,22 +268,41 @@ class ObjectFitter:
         if not starts:
             return False
         now = scene.refined(scene.objects.take(members), samples, window)
+        starts += [scene.objects.take(members)] if len(members) == 2 else self._next_to(members)
         pairs = scene.refined_rivals(starts, samples, window)
-        score = np.array([pair.cost + self._implausibility(pair.objects) for pair in pairs])
+        score = np.array([self._score(pair) for pair in pairs])
         best = pairs[int(np.argmin(score))]
-        extra = self.threshold if len(members) == 1 else 0.0
-        if float(score.min()) > now.cost + self._implausibility(now.objects) - extra:
+        if len(members) == 1 and float(score.min()) > self._score(now) - self.threshold:
             return False
         weight = np.exp(-(score - score.min()))
         rivals = rivals_of(best.objects, [p.objects for p in pairs], weight)
         scene.replace(members, best, rivals)
         return True
 
+    def _next_to(self, members: list[int]) -> list[Objects]:
+        """An object, in each of its likeliest lobes, and the best second one beside it."""
+        scene = self.scene
+        samples, here = scene.alone(members), float(scene.objects.range_m[members[0]])
+        first = scan(self.model, self.ping, samples, here, 0.2 * self._reach_m, self.bearings)
+        pairs = []
+        for bearing, strength, _ in first.tops()[:_LOBES_TRIED]:
+            one = one_object(first.range_m, bearing, strength)
+            left = samples.copy()
+            window = window_of(self.model, self.ping, one)
+            rendered = signals(self.model, one, self.ping.time_s[window])
+            left[:, window] -= strength * rendered.value[:, 0, :]
+            second = scan(self.model, self.ping, left, here, self._reach_m, self.bearings)
+            pairs.append(one.join(one_object(*second.best()[:3])))
+        return pairs
+
+    def _score(self, refined: Refined) -> float:
+        return refined.cost + self._implausibility(refined.objects)
+
     def _implausibility(self, objects: Objects) -> float:
         """Prior cost in nats: strong objects that cancel each other, or lie off the beams.
 
-        Strengths are as likely in every decade, p(a) ~ 1/|a|^2, and a bearing is as likely as
-        its better ear's gain.
+        Amplitudes a are taken as distributed like a^-2 (few strong, many weak); heard through a
+        gain g, an amplitude h = a g at a bearing then has the density g / h^2.
         """
         gain = self.model.geometry(objects.range_m, objects.bearing_rad).gain.max(axis=0)
         heard = np.maximum(np.abs(objects.strength) * gain, 1e-12)
@@ -289,7 +310,9 @@ class ObjectFitter:
 
 
 def rivals_of(best: Objects, pairs: list[Objects], weight: FloatArray) -> list[Rivals]:
-    """Bearings that other likely pairs give each of the best two objects, by rank of bearing.
+    """Bearings that likely pairs give each of the best two objects, by rank of bearing.
+
+    The best pair's own bearings come first.
 
     Parameters
     ----------
@@ -298,8 +321,10 @@ def rivals_of(best: Objects, pairs: list[Objects], weight: FloatArray) -> list[R
     keep = weight > math.exp(-_RIVAL_NATS)
     if np.count_nonzero(keep) < 2:
         return [(), ()]
-    bearings = np.array([np.sort(p.bearing_rad) for p in pairs])[keep]
-    share = weight[keep] / weight[keep].sum()
+    order = np.argsort(weight)[::-1]
+    order = order[keep[order]]
+    bearings = np.array([np.sort(p.bearing_rad) for p in pairs])[order]
+    share = weight[order] / weight[order].sum()
     rank = np.argsort(np.argsort(best.bearing_rad))
     return [
         tuple(zip(bearings[:, r].tolist(), share.tolist(), strict=True)) for r in rank.tolist()

@@ -51,8 +51,8 @@ def _detection(
     velocity_sigma = math.sqrt(float(covariance[2, 2]))
     informative = velocity_sigma < 0.7 * config.velocity_sigma_m_s
     range_m, variance_m2 = float(one.range_m[0]), float(covariance[0, 0])
-    if posterior.ambiguous and posterior.range_sigma_m > math.sqrt(variance_m2):
-        range_m, variance_m2 = posterior.range_m, posterior.range_sigma_m**2
+    if posterior.ambiguous:
+        variance_m2 = max(variance_m2, posterior.range_sigma_m**2)
     return Detection(
         range_m=range_m,
         bearing_rad=posterior.bearing_rad,

@@ -15,6 +15,9 @@ from .model import HeadModel
 from .objects import Objects, no_objects
 from .search import Scan
 
+_MAX_CLUSTER = 4
+"""More are not refined at once: the outer ones barely touch the object in the middle."""
+
 Rivals = tuple[tuple[float, float], ...]
 """Bearings with weights that equally likely explanations give an object; empty: none."""
 
@@ -120,33 +123,21 @@ class Scene:
         return [self.items[i].rivals for i in members]
 
     def cluster(self, i: int) -> list[int]:
-        """Objects whose pulses' bodies overlap that of object i, in chains, i included."""
-        members, low, high = {i}, self.items[i].core.start, self.items[i].core.stop
-        while True:
-            more = {
-                j
-                for j, item in enumerate(self.items)
-                if j not in members and item.core.start < high and item.core.stop > low
-            }
-            if not more:
-                return sorted(members)
-            members |= more
-            low = min(self.items[j].core.start for j in members)
-            high = max(self.items[j].core.stop for j in members)
+        """Object i and the nearest few whose pulses' bodies overlap its own."""
+        core = self.items[i].core
+        members = [
+            j
+            for j, item in enumerate(self.items)
+            if item.core.start < core.stop and item.core.stop > core.start
+        ]
+        distance = np.abs(self.objects.range_m[members] - self.objects.range_m[i])
+        nearest = np.argsort(distance, kind="stable")[:_MAX_CLUSTER]
+        return sorted(members[k] for k in nearest.tolist())
 
-    def clusters(self) -> list[list[int]]:
-        """All clusters."""
-        found: list[list[int]] = []
-        for i in range(len(self)):
-            if not any(i in members for members in found):
-                found.append(self.cluster(i))
-        return found
-
-    def settled(self, members: Sequence[int]) -> bool:
-        """Whether the members, and no others, were last refined together."""
-        groups = {self.items[i].fitted.group for i in members}
-        together = [i for i, item in enumerate(self.items) if item.fitted.group in groups]
-        return len(groups) == 1 and sorted(members) == together
+    def settled(self, i: int) -> bool:
+        """Whether an object was last refined together with all of its cluster."""
+        group = self.items[i].fitted.group
+        return all(self.items[j].fitted.group == group for j in self.cluster(i))
 
     def span(self, members: Sequence[int]) -> slice:
         """Samples that the members reach."""

@@ -15,6 +15,7 @@ from .model import HeadModel
 _FINE = 8
 _RANGE_STEP_M = 4e-3
 _PHASE_STEPS = 7
+_COARSE_BEARINGS = 73
 
 
 def matched_filter(model: HeadModel, ping: Conditioned, samples: ComplexArray) -> FloatArray:
@@ -54,10 +55,14 @@ def bearing_grid(model: HeadModel, max_bearing_rad: float) -> FloatArray:
 
 @dataclass(frozen=True, eq=False)
 class Scan:
-    """One object tried at all places near a range; arrays of shape (n_range, n_bearing).
+    """One object tried over bearing, at the range that suits it best.
 
     Attributes
     ----------
+    range_m, range_sigma_m
+        Best range, and its standard deviation over all bearings.
+    bearing_rad
+        shape (n,), a grid on which all that follows is given.
     aligned
         Log-likelihood gain (nats) if the carrier phases of both ears agreed there, log prior
         of the bearing included. It varies slowly over bearing: level and delay differences.
@@ -70,39 +75,38 @@ class Scan:
         Complex strength of the best object there, if the phases agreed.
     """
 
-    range_m: FloatArray
+    range_m: float
+    range_sigma_m: float
     bearing_rad: FloatArray
     aligned: FloatArray
     phase_rad: FloatArray
     sharpness: FloatArray
     strength: ComplexArray
 
-    @property
-    def gain(self) -> FloatArray:
-        """Log-likelihood gain of one object, phases included, nats."""
-        return np.asarray(self.aligned - self.sharpness * (1.0 - np.cos(self.phase_rad)))
-
-    def best(self) -> tuple[float, float, complex, float]:
-        """Range, bearing, strength and gain of the best place.
+    def tops(self) -> list[tuple[float, complex, float]]:
+        """Bearing, strength and gain of all lobes (of the best bearing, if there is no lobe),
+        best first.
 
         Between two bearings of the grid the phase passes 0 or not; where it does, the gain is
         the aligned one, however far the grid's own bearings are from the lobe's top.
         """
-        i = int(np.argmax(self.gain.max(axis=1)))
-        lobes = self.lobes(i)
-        gain = np.interp(lobes, self.bearing_rad, self.aligned[i])
-        if lobes.size == 0 or self.gain[i].max() > gain.max():
-            j = int(np.argmax(self.gain[i]))
-            bearing, top = float(self.bearing_rad[j]), float(self.gain[i, j])
-        else:
-            k = int(np.argmax(gain))
-            bearing, top = float(lobes[k]), float(gain[k])
-            j = int(np.argmin(np.abs(self.bearing_rad - bearing)))
-        return float(self.range_m[i]), bearing, complex(self.strength[i, j]), top
+        lobes = self.lobes()
+        if lobes.size == 0:
+            gain = self.aligned - self.sharpness * (1.0 - np.cos(self.phase_rad))
+            j = int(np.argmax(gain))
+            return [(float(self.bearing_rad[j]), complex(self.strength[j]), float(gain[j]))]
+        gain = np.interp(lobes, self.bearing_rad, self.aligned)
+        order = np.argsort(gain)[::-1]
+        at = np.searchsorted(self.bearing_rad, lobes)
+        return [(float(lobes[k]), complex(self.strength[at[k]]), float(gain[k])) for k in order]
 
-    def lobes(self, i: int) -> FloatArray:
-        """Bearings at which the carriers of both ears agree, for one range."""
-        phase = self.phase_rad[i]
+    def best(self) -> tuple[float, float, complex, float]:
+        """Range, bearing, strength and gain of the best place."""
+        return (self.range_m, *self.tops()[0])
+
+    def lobes(self) -> FloatArray:
+        """Bearings at which the carriers of both ears agree."""
+        phase = self.phase_rad
         turn = np.angle(np.exp(1j * np.diff(phase)))
         # The phase wraps at +-pi; a step that crosses 0 keeps its size when unwrapped.
         crosses = (phase[:-1] * (phase[:-1] + turn) <= 0.0) & (np.abs(phase[:-1]) < math.pi / 2)
@@ -128,33 +132,64 @@ def scan(
     gain = |sum_e g_e conj(phase_e) b_e|^2 / sum_e g_e^2 e_e with b and e the weighted match and
     energy of the pulse at each ear's delay: the likelihood ratio of one object of unknown
     complex strength in Gaussian noise. With m_e the two terms of the sum it is
-    (|m_L| + |m_R|)^2 less 2 |m_L| |m_R| (1 - cos phase), over the energy. The prior of a bearing
-    is proportional to the better ear's gain: an object far off the beams must be so much
-    stronger to be heard.
+    (|m_L| + |m_R|)^2 less 2 |m_L| |m_R| (1 - cos phase), over the energy. The first part varies
+    slowly and is computed on a coarse grid, from which the range follows; the phases follow
+    from the geometry on the fine one. The prior of a bearing is proportional to the better
+    ear's gain: an object far off the beams must be so much stronger to be heard.
     """
     steps = max(1, int(round(half_width_m / _RANGE_STEP_M)))
     offset_m = np.linspace(-half_width_m, half_width_m, 2 * steps + 1)
+    coarse = np.linspace(bearing_rad[0], bearing_rad[-1], _COARSE_BEARINGS)
+    match, energy, prior = _coarse(model, ping, samples, range_m, offset_m, coarse)
+    left, right = np.abs(match)
+    aligned = (left + right) ** 2 / energy + prior
+    i = int(np.argmax(aligned.max(axis=1)))
+    best_range = range_m + float(offset_m[i])
+    fine = np.array([np.interp(bearing_rad, coarse, row) for row in match[:, i]])
+    geometry = model.geometry(np.full(bearing_rad.shape, best_range), bearing_rad)
+    fine *= model.carrier(geometry).conj()
+    left, right = np.abs(fine)
+    energy_fine = np.interp(bearing_rad, coarse, energy[i])
+    stronger = np.where(left >= right, fine[0], fine[1])
+    direction = stronger / np.maximum(np.abs(stronger), 1e-30)
+    return Scan(
+        range_m=best_range,
+        range_sigma_m=_range_sigma(aligned, offset_m),
+        bearing_rad=bearing_rad,
+        aligned=(left + right) ** 2 / energy_fine + np.interp(bearing_rad, coarse, prior),
+        phase_rad=np.angle(fine[1] * fine[0].conj()),
+        sharpness=2.0 * left * right / energy_fine,
+        strength=direction * (left + right) / energy_fine,
+    )
+
+
+def _coarse(
+    model: HeadModel,
+    ping: Conditioned,
+    samples: ComplexArray,
+    range_m: float,
+    offset_m: FloatArray,
+    bearing_rad: FloatArray,
+) -> tuple[ComplexArray, FloatArray, FloatArray]:
+    """Matches (2, n_range, n_bearing) without carrier, energies and log prior of the bearing."""
     geometry = model.geometry(np.full(bearing_rad.shape, range_m), bearing_rad)
     shift_s = 2.0 * offset_m / model.speed_m_s
-    factor = geometry.gain * model.carrier(geometry).conj()
-    (left, left_energy), (right, right_energy) = (
-        _correlate(model, ping, samples, ear, geometry.delay_s[ear] + shift_s[:, None])
-        for ear in range(2)
-    )
-    left, right = factor[0] * left, factor[1] * right
-    energy = geometry.gain[0] ** 2 * left_energy + geometry.gain[1] ** 2 * right_energy
-    safe = np.maximum(energy, 1e-30)
+    match = np.empty((2, offset_m.size, bearing_rad.size), complex)
+    energy = np.full(match.shape[1:], 1e-30)
+    for ear in range(2):
+        delay = geometry.delay_s[ear][None, :] + shift_s[:, None]
+        b, e = _correlate(model, ping, samples, ear, delay)
+        match[ear] = geometry.gain[ear] * b
+        energy += geometry.gain[ear] ** 2 * e
     prior = np.log(np.maximum(geometry.gain.max(axis=0), 1e-3))
-    size = np.abs(left) + np.abs(right)
-    phase = np.angle(right * left.conj())
-    return Scan(
-        range_m=range_m + offset_m,
-        bearing_rad=bearing_rad,
-        aligned=size**2 / safe + prior,
-        phase_rad=phase,
-        sharpness=2.0 * np.abs(left) * np.abs(right) / safe,
-        strength=size * np.exp(1j * (np.angle(left) + 0.5 * phase)) / safe,
-    )
+    return match, energy, prior
+
+
+def _range_sigma(aligned: FloatArray, offset_m: FloatArray) -> float:
+    weight = np.exp(aligned - aligned.max()).sum(axis=1)
+    weight = weight / weight.sum()
+    mean = float(weight @ offset_m)
+    return math.sqrt(float(weight @ (offset_m - mean) ** 2))
 
 
 def _correlate(
