@@ -17,7 +17,7 @@ from .objects import Objects, one_object
 from .pairing import Candidate
 from .scene import Explained, Rivals, Scene
 from .search import Scan, bearing_grid, matched_filter, scan
-from .split import best_pairs
+from .split import best_pairs, implausibility
 
 _SEED_HALF_WIDTH_M = 0.03
 _RESEARCH_HALF_WIDTH_M = 0.012
@@ -296,17 +296,9 @@ class ObjectFitter:
         return pairs
 
     def _score(self, refined: Refined) -> float:
-        return refined.cost + self._implausibility(refined.objects)
-
-    def _implausibility(self, objects: Objects) -> float:
-        """Prior cost in nats: strong objects that cancel each other, or lie off the beams.
-
-        Amplitudes a are taken as distributed like a^-2 (few strong, many weak); heard through a
-        gain g, an amplitude h = a g at a bearing then has the density g / h^2.
-        """
+        objects = refined.objects
         gain = self.model.geometry(objects.range_m, objects.bearing_rad).gain.max(axis=0)
-        heard = np.maximum(np.abs(objects.strength) * gain, 1e-12)
-        return float(np.sum(2.0 * np.log(heard) - np.log(np.maximum(gain, 1e-3))))
+        return refined.cost + float(np.sum(implausibility(np.abs(objects.strength) * gain, gain)))
 
 
 def rivals_of(best: Objects, pairs: list[Objects], weight: FloatArray) -> list[Rivals]:
