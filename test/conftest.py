@@ -105,10 +105,10 @@ class RunningNode:
     def text(self):
         return self.log.read_text()
 
-    def interrupt(self):
-        """SIGINT as Ctrl-C sends it; the exit code."""
+    def interrupt(self, sign=signal.SIGINT):
+        """SIGINT as Ctrl-C sends it, or another signal; the exit code."""
         self.expected.remove(self)
-        self.process.send_signal(signal.SIGINT)
+        self.process.send_signal(sign)
         return self.process.wait(10.0)
 
     def exit_code(self, timeout_s=START_S):

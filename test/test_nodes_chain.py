@@ -1,6 +1,7 @@
 """The real nodes as processes over DDS: a simulated pole becomes detections, views and a map."""
 
 import math
+import signal
 
 import numpy as np
 import pytest
@@ -75,7 +76,8 @@ def test_a_pole_is_found_where_it_is(start_node, driver, peer):
     peer.wait_for(lambda: len(found) >= 12 and len(envelopes) >= 3, "detections")
 
     # One answer for each ping, in order, with the header of the ping.
-    assert [m.sequence for m in found] == list(range(len(found)))
+    first = found[0].sequence
+    assert [m.sequence for m in found] == list(range(first, first + len(found)))
     by_sequence = {m.sequence: m for m in raw}
     for m in found:
         assert m.header == by_sequence[m.sequence].header
@@ -116,10 +118,11 @@ def test_a_pole_is_found_where_it_is(start_node, driver, peer):
     assert (state["dropped"], state["missing sequence numbers"]) == ("0", "0")
     assert int(state["processed"]) >= 5
     assert float(state["latency p95 [ms]"]) > 0.0
+    assert 0.0 < float(state["age of last processed [s]"]) < 60.0
 
-    # Ctrl-C ends both quietly.
-    for node in (source, processing):
-        assert node.interrupt() == 0
+    # Ctrl-C and what a launch system sends end both quietly.
+    for node, sign in ((source, signal.SIGINT), (processing, signal.SIGTERM)):
+        assert node.interrupt(sign) == 0
         assert "Traceback" not in node.text
     assert "SIMULATED" in source.text
 

@@ -9,6 +9,7 @@ pytest.importorskip("rclpy")
 pytestmark = [pytest.mark.ros, pytest.mark.filterwarnings("ignore::DeprecationWarning")]
 
 from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus  # noqa: E402
+from sensor_msgs.msg import LaserScan  # noqa: E402
 
 from ros_echo_perception.core.types import RawEcho as CoreEcho  # noqa: E402
 from ros_echo_perception.msg import EchoDetectionArray, RawEcho  # noqa: E402
@@ -38,56 +39,86 @@ BAD = {
 }
 
 
+class Processing:
+    """The processing node, what it finds, what it says of itself, and a way to send to it.
+
+    A publisher knows of a subscription before that knows of the publisher, so that the first
+    messages may be lost: pings numbered 0 are sent until one is heard, and counts start there.
+    """
+
+    def __init__(self, start_node, peer):
+        self.peer = peer
+        self.found = peer.collect(EchoDetectionArray, "detections")
+        self.states = peer.collect(DiagnosticArray, "/diagnostics")
+        self._publisher = peer.node.create_publisher(RawEcho, "raw_echo", 50)
+        self.node = start_node("processing", {"diagnostics_period_s": 0.1})
+        peer.wait_for(self._heard, "the processing node to hear")
+        peer.wait_for(self._settled, "the last of the first pings")
+        self._before = self.state()
+        self.found.clear()
+
+    def send(self, msg):
+        self._publisher.publish(msg)
+
+    def state(self):
+        return self.peer.diagnostics(self.states, "processing")
+
+    def count(self, name):
+        """A count since the start of the test."""
+        return int(self.state().get(name, 0)) - int(self._before.get(name, 0))
+
+    def _heard(self):
+        if not self.found:
+            self.send(raw_message(0))
+        return self.found
+
+    def _settled(self):
+        """Whether the count of received pings has stopped to grow."""
+        counts = [
+            value.value
+            for array in self.states[-4:]
+            for value in array.status[0].values
+            if value.key == "received"
+        ]
+        return len(counts) == 4 and counts[0] != "0" and len(set(counts)) == 1
+
+
 @pytest.fixture
 def processing(start_node, peer):
-    """The processing node, what it finds, what it says of itself, and a way to send to it."""
-    found = peer.collect(EchoDetectionArray, "detections")
-    states = peer.collect(DiagnosticArray, "/diagnostics")
-    publisher = peer.node.create_publisher(RawEcho, "raw_echo", 50)
-    node = start_node("processing", {"diagnostics_period_s": 0.2})
-    peer.wait_for(publisher.get_subscription_count, "processing")
-    peer.wait_for(lambda: peer.diagnostics(states, "processing"), "diagnostics")
-    return node, found, states, publisher.publish
+    return Processing(start_node, peer)
 
 
 def test_malformed_echoes_are_dropped_and_counted_and_the_node_goes_on(processing, peer):
-    node, found, states, send = processing
-    for sequence, changes in enumerate(BAD.values()):
-        send(raw_message(sequence, **changes))
-    send(raw_message(len(BAD)))
-    peer.wait_for(lambda: found, "the good ping")
-    assert [m.sequence for m in found] == [len(BAD)]
-    assert found[0].header.frame_id == "echo_head"
-
-    def state():
-        seen = peer.diagnostics(states, "processing")
-        return seen if int(seen["received"]) == len(BAD) + 1 else None
-
-    seen = peer.wait_for(state, "diagnostics")
-    assert int(seen["dropped"]) == len(BAD)
-    assert int(seen["processed"]) == 1
-    assert seen["level"] == DiagnosticStatus.WARN
-    assert seen["missing sequence numbers"] == "0"
-    assert "gain curve times" in seen["last error"]
-    assert "lengths of left and right is (4000, 3999)" in node.text  # the first one is told
+    for sequence, changes in enumerate(BAD.values(), start=1):
+        processing.send(raw_message(sequence, **changes))
+    last = len(BAD) + 1
+    processing.send(raw_message(last))
+    peer.wait_for(lambda: processing.found, "the good ping")
+    assert [m.sequence for m in processing.found] == [last]
+    assert processing.found[0].header.frame_id == "echo_head"
+    peer.wait_for(lambda: processing.count("received") == last, "diagnostics")
+    assert processing.count("dropped") == len(BAD)
+    assert processing.count("dropped: invalid message") == len(BAD)
+    assert processing.count("processed") == 1
+    state = processing.state()
+    assert state["level"] == DiagnosticStatus.WARN
+    assert state["missing sequence numbers"] == "0"
+    assert "gain curve times" in state["last error"]
+    assert "lengths of left and right is (4000, 3999)" in processing.node.text
 
 
 def test_time_that_jumps_back_is_followed(processing, peer):
-    _, found, states, send = processing
-    send(raw_message(0))
-    send(raw_message(1, time_s=T0_S - 100.0))
-    peer.wait_for(lambda: len(found) == 2, "both pings")
-    assert conversion.seconds(found[1].header.stamp) == T0_S - 100.0
-    peer.wait_for(lambda: peer.diagnostics(states, "processing")["time jumps"] == "1", "the jump")
+    processing.send(raw_message(1))
+    processing.send(raw_message(2, time_s=T0_S - 100.0))
+    peer.wait_for(lambda: len(processing.found) == 2, "both pings")
+    assert conversion.seconds(processing.found[1].header.stamp) == T0_S - 100.0
+    peer.wait_for(lambda: processing.count("time jumps") == 1, "the jump")
 
 
 def test_lost_pings_are_counted(processing, peer):
-    _, found, states, send = processing
-    for sequence in (0, 1, 5):
-        send(raw_message(sequence))
-    peer.wait_for(
-        lambda: peer.diagnostics(states, "processing")["missing sequence numbers"] == "3", "losses"
-    )
+    for sequence in (1, 2, 6):
+        processing.send(raw_message(sequence))
+    peer.wait_for(lambda: processing.count("missing sequence numbers") == 3, "losses")
 
 
 def test_a_refused_parameter_says_why_and_changes_nothing(processing, peer):
@@ -107,21 +138,18 @@ def test_a_refused_parameter_says_why_and_changes_nothing(processing, peer):
 
 
 def test_an_accepted_parameter_takes_effect_on_the_next_ping(processing, peer):
-    from sensor_msgs.msg import LaserScan
-
-    _, found, _, send = processing
     scans = peer.collect(LaserScan, "scan")
     peer.wait_for(lambda: peer.node.count_publishers("/scan") == 1, "the scan")
     assert peer.set_parameters("/processing", **{"scan.range_max_m": 7}).successful
 
     def answered():
-        if len(found) > len(sent) - 1:
-            sent.append(len(sent))
-            send(raw_message(sent[-1]))
+        if len(processing.found) >= len(sent):  # the scan may connect after some pings
+            sent.append(raw_message(len(sent) + 1))
+            processing.send(sent[-1])
         return scans
 
     sent = []
-    peer.wait_for(answered, "a scan")  # the first pings may go before the scan is connected
+    peer.wait_for(answered, "a scan")
     assert scans[0].range_max == 7.0
 
 

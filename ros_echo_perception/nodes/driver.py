@@ -22,6 +22,7 @@ from .settings import SECTIONS, DriverSettings
 from .source import open_configured
 
 _TEMPERATURE_PERIOD_S = 1.0
+_MATCHING_S = 0.2  # a subscription learns of a publisher a moment after that has learnt of it
 
 
 class DriverNode(Node):
@@ -77,6 +78,7 @@ class DriverNode(Node):
             if self._gate is None and time.monotonic() >= end:
                 break
             if self._consumer_is_there():
+                stop.wait(_MATCHING_S)
                 break
             stop.wait(0.05)
         self._origin_s = time.time()

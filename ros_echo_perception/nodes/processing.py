@@ -126,6 +126,8 @@ class ProcessingNode(Node):
             flags = self._last.flags
             values["noise left"], values["noise right"] = self._last.noise
             values["flags"] = flag_names(flags)
+            now_s = conversion.seconds(self.get_clock().now().to_msg())
+            values["age of last processed [s]"] = f"{now_s - self._last.emission_time_s:.3f}"
             values["detections in last ping"] = len(self._last.detections)
         level, text = judge(self.activity, flags, self._lost)
         return Status(level, text, values, self.head.name)
