@@ -120,13 +120,9 @@ class ObjectFitter:
 
     def _try_add(self, delay_s: float) -> None:
         start = self._look(delay_s)
-        if start is None:
-            return
-        window = window_of(self.model, self.ping, start[0])
-        new = self.scene.add(self.scene.refined(start[0], self.scene.residual, window))
-        members = self.scene.cluster(new[0])
-        if len(members) > 1:
-            self.scene.settle(members)
+        if start is not None:
+            new = self.scene.add_unrefined(start[0])
+            self.scene.settle(self.scene.cluster(new))
 
     def _take_off_click(self, delay_s: float, object_gain: float) -> bool:
         peak_s = delay_s + self.model.pulses[0].peak_time_s
@@ -197,11 +193,7 @@ class ObjectFitter:
     def _drop_weak(self) -> Explained:
         """Drop what the likelihood does not miss, weakest first; measure what stays."""
         scene = self.scene
-        for _ in range(len(scene)):
-            unsettled = [i for i in range(len(scene)) if not scene.settled(i)]
-            if not unsettled:
-                break
-            scene.settle(scene.cluster(unsettled[0]))
+        scene.settle_all()
         gain = self._gains()
         while gain.size and gain.min() < self.threshold:
             weakest = int(np.argmin(gain))
@@ -249,7 +241,7 @@ class ObjectFitter:
         """Put other objects in the place of some, if the refined likelihood gains by more."""
         scene = self.scene
         samples, window = scene.alone(members), scene.span(members)
-        before = scene.refined(scene.objects.take(members), samples, window).cost
+        before = scene.silence_cost(scene.residual, window)
         after = scene.refined(others, samples, window)
         if after.cost > before - extra:
             return False
@@ -267,12 +259,11 @@ class ObjectFitter:
         starts = best_pairs(self.model, self.ping, samples, centre, self.config)
         if not starts:
             return False
-        now = scene.refined(scene.objects.take(members), samples, window)
         starts += [scene.objects.take(members)] if len(members) == 2 else self._next_to(members)
         pairs = scene.refined_rivals(starts, samples, window)
         score = np.array([self._score(pair) for pair in pairs])
         best = pairs[int(np.argmin(score))]
-        if len(members) == 1 and float(score.min()) > self._score(now) - self.threshold:
+        if len(members) == 1 and float(score.min()) > self._score_now(members, window):
             return False
         weight = np.exp(-(score - score.min()))
         rivals = rivals_of(best.objects, [p.objects for p in pairs], weight)
@@ -296,9 +287,16 @@ class ObjectFitter:
         return pairs
 
     def _score(self, refined: Refined) -> float:
-        objects = refined.objects
+        return refined.cost + self._implausibility(refined.objects)
+
+    def _score_now(self, members: list[int], window: slice) -> float:
+        """What a pair in the place of one object must come below."""
+        cost = self.scene.silence_cost(self.scene.residual, window)
+        return cost + self._implausibility(self.scene.objects.take(members)) - self.threshold
+
+    def _implausibility(self, objects: Objects) -> float:
         gain = self.model.geometry(objects.range_m, objects.bearing_rad).gain.max(axis=0)
-        return refined.cost + float(np.sum(implausibility(np.abs(objects.strength) * gain, gain)))
+        return float(np.sum(implausibility(np.abs(objects.strength) * gain, gain)))
 
 
 def rivals_of(best: Objects, pairs: list[Objects], weight: FloatArray) -> list[Rivals]:

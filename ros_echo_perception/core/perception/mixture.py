@@ -20,7 +20,7 @@ import numpy as np
 
 from ..types import FloatArray
 
-_TOLERANCE = 1e-5
+_TOLERANCE = 1e-4
 _MAX_ROUNDS = 300
 _BACKGROUND = 1e-3
 _LEAST_EXCESS = 2.5
@@ -76,7 +76,7 @@ def fit_mixture(
 
     Notes
     -----
-    Ends when a round raises the mean log likelihood by less than 1e-5.
+    Ends when a round raises the mean log likelihood by less than 1e-4.
 
     Examples
     --------

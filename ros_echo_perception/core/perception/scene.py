@@ -86,23 +86,23 @@ class Scene:
         group = next(self._groups)
         first = len(self)
         for k in range(len(refined.objects)):
-            one = refined.objects.take([k])
-            window = window_of(self.model, self.ping, one)
-            rendered = signals(self.model, one, self.ping.time_s[window]).value[:, 0, :]
-            sound = one.strength[0] * rendered
-            self.objects = self.objects.join(one)
-            self.items.append(
-                Item(
-                    window,
-                    core_of(self.model, self.ping, one),
-                    sound,
-                    Fitted(group, refined.covariance[k], float(refined.strength_loss[k])),
-                    rivals[k] if rivals else (),
-                    found,
-                )
-            )
-            self.residual[:, window] -= sound
+            fitted = Fitted(group, refined.covariance[k], float(refined.strength_loss[k]))
+            self._append(refined.objects.take([k]), fitted, rivals[k] if rivals else (), found)
         return list(range(first, len(self)))
+
+    def add_unrefined(self, one: Objects) -> int:
+        """Add one object as a start for a refinement; returns its number."""
+        self._append(one, Fitted(next(self._groups), np.full((3, 3), np.inf), 0.0), (), None)
+        return len(self) - 1
+
+    def _append(self, one: Objects, fitted: Fitted, rivals: Rivals, found: Scan | None) -> None:
+        window = window_of(self.model, self.ping, one)
+        rendered = signals(self.model, one, self.ping.time_s[window]).value[:, 0, :]
+        sound = one.strength[0] * rendered
+        core = core_of(self.model, self.ping, one)
+        self.objects = self.objects.join(one)
+        self.items.append(Item(window, core, sound, fitted, rivals, found))
+        self.residual[:, window] -= sound
 
     def replace(
         self, members: Sequence[int], refined: Refined, rivals: Sequence[Rivals] | None = None
@@ -134,8 +134,20 @@ class Scene:
         nearest = np.argsort(distance, kind="stable")[:_MAX_CLUSTER]
         return sorted(members[k] for k in nearest.tolist())
 
-    def settled(self, i: int) -> bool:
-        """Whether an object was last refined together with all of its cluster."""
+    def settle_all(self) -> None:
+        """Refine every object once that was last refined without all of its cluster."""
+        first_new = next(self._groups)
+        while True:
+            stale = [
+                i
+                for i, item in enumerate(self.items)
+                if item.fitted.group < first_new and not self._together(i)
+            ]
+            if not stale:
+                return
+            self.settle(self.cluster(stale[0]))
+
+    def _together(self, i: int) -> bool:
         group = self.items[i].fitted.group
         return all(self.items[j].fitted.group == group for j in self.cluster(i))
 
