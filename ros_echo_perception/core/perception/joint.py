@@ -136,23 +136,26 @@ def refine(
 
     Parameters
     ----------
-    problems : as many sets as excerpts, of equally many objects, each fitted on its own.
+    problems : as many sets as excerpts, of equally many objects, each fitted on its own. Their
+        strengths must be near; those of a scan or of a pair search are.
     """
     problem = _Problems(model, data, priors)
-    objects = problem.with_best_strengths(_joined(problems))
-    state = problem.evaluate(objects)
+    state = problem.evaluate(_joined(problems))
     damping = np.full(len(problems), 1e-3)
     normal, gradient = problem.normal_equations(state)
     for _ in range(_ROUNDS):
         diagonal = np.einsum("bii->bi", normal)
         damped = normal + (damping[:, None] * diagonal)[:, :, None] * np.eye(diagonal.shape[1])
         step = np.linalg.solve(damped, gradient[:, :, None])[:, :, 0]
+        # What the quadratic model promises; too little is not worth a look.
+        if float(np.einsum("bi,bi->b", step, gradient).max()) < _TOLERANCE:
+            break
         trial = problem.evaluate(problem.moved(state.objects, step))
         gained = state.cost - trial.cost
         better = gained > 0.0
         damping = np.where(better, np.maximum(damping / 8.0, 1e-7), damping * 8.0)
         state = trial if better.all() else problem.chosen(better, trial, state)
-        if np.all(gained < _TOLERANCE) and (better.all() or damping.min() > 1.0):
+        if damping.min() > 1e3:
             break
         if better.any():
             normal, gradient = problem.normal_equations(state)
@@ -201,17 +204,6 @@ class _Problems:
         cost += np.einsum("bn,bn->b", residual.imag, residual.imag)
         cost += 0.5 * np.sum(velocity**2, axis=1)
         return _State(objects, rendered, residual, cost)
-
-    def with_best_strengths(self, objects: Objects) -> Objects:
-        value = self._signals(objects).value.reshape(2, self.b, -1, self.n) * self.weight
-        basis = value.transpose(1, 2, 0, 3).reshape(self.b, -1, 2 * self.n)
-        k = basis.shape[1]
-        gram = basis.conj() @ basis.transpose(0, 2, 1)
-        # Objects that coincide, or lie where nothing is known, must not break the solution.
-        size = np.einsum("bii->b", gram).real / k
-        gram = gram + (1e-6 * size + 1e-12)[:, None, None] * np.eye(k)
-        match = basis.conj() @ self.target[:, :, None]
-        return objects.with_strength(np.linalg.solve(gram, match)[:, :, 0].ravel())
 
     def normal_equations(self, state: _State) -> tuple[FloatArray, FloatArray]:
         """Normal matrices (b, 5 k, 5 k) and gradients (b, 5 k) for steps of all unknowns."""
@@ -298,20 +290,15 @@ class _Problems:
 
 def window_of(model: HeadModel, ping: Conditioned, objects: Objects) -> slice:
     """Samples that the objects reach."""
-    pair = model.pulse_pair
-    return _window(model, ping, objects, pair.start_s, pair.end_s)
+    return windows_of(model, ping, objects)[0]
 
 
-def core_of(model: HeadModel, ping: Conditioned, objects: Objects) -> slice:
-    """Samples that the bodies of the objects' pulses reach, their faint tails left out."""
-    pair = model.pulse_pair
-    return _window(model, ping, objects, pair.core_start_s, pair.core_end_s)
-
-
-def _window(
-    model: HeadModel, ping: Conditioned, objects: Objects, before_s: float, after_s: float
-) -> slice:
-    delay = model.geometry(objects.range_m, objects.bearing_rad).delay_s
-    start = int(np.searchsorted(ping.time_s, float(delay.min()) + before_s))
-    stop = int(np.searchsorted(ping.time_s, float(delay.max()) + after_s, side="right"))
-    return slice(start, max(stop, start))
+def windows_of(model: HeadModel, ping: Conditioned, objects: Objects) -> tuple[slice, slice]:
+    """Samples that the objects reach, and those that the bodies of their pulses reach."""
+    delay = model.delays(objects.range_m, objects.bearing_rad)
+    low, high, pair = float(delay.min()), float(delay.max()), model.pulse_pair
+    edges = np.array(
+        [low + pair.start_s, high + pair.end_s, low + pair.core_start_s, high + pair.core_end_s]
+    )
+    first, last, core_first, core_last = np.searchsorted(ping.time_s, edges).tolist()
+    return slice(first, max(first, last)), slice(core_first, max(core_first, core_last))

@@ -59,6 +59,12 @@ class HeadModel:
         # An object that recedes at v lowers the carrier by 2 v / c of itself.
         self.doppler_rad_s_per_m_s = -2.0 * self.omega / speed_m_s
 
+    def delays(self, range_m: FloatArray, bearing_rad: FloatArray) -> FloatArray:
+        """Delays of both ears since the emission, shape (2, ...) for places of shape (...)."""
+        dx, dy = self._offsets(range_m, np.cos(bearing_rad), np.sin(bearing_rad))
+        distance = np.sqrt(dx * dx + dy * dy + self._column(2, dx.ndim))
+        return self.head.latency_s + (distance[0] + distance[1:]) / self.speed_m_s
+
     def geometry(self, range_m: FloatArray, bearing_rad: FloatArray) -> EarGeometry:
         """Delays since the emission and gains of both ears, with derivatives.
 
@@ -67,23 +73,33 @@ class HeadModel:
         range_m, bearing_rad : equal shapes.
         """
         cos, sin = np.cos(bearing_rad), np.sin(bearing_rad)
-        shape = (3,) + (1,) * np.ndim(range_m)
-        x, y, z2 = (part.reshape(shape) for part in self._places)
-        dx, dy = range_m * cos - x, range_m * sin - y
-        distance = np.sqrt(dx * dx + dy * dy + z2)
-        along = (dx * cos + dy * sin) / distance
-        across = (dy * cos - dx * sin) * range_m / distance
+        dx, dy = self._offsets(range_m, cos, sin)
+        distance = np.sqrt(dx * dx + dy * dy + self._column(2, dx.ndim))
+        unit = 1.0 / (distance * self.speed_m_s)
+        along = (dx * cos + dy * sin) * unit
+        across = (dy * cos - dx * sin) * (range_m * unit)
+        travel = distance / self.speed_m_s
         beam, beam_slope, tilt = self._beams.lookup(np.arctan2(dy, dx))
-        c = self.speed_m_s
-        ear_gain = self._ear_gain.reshape(2, *shape[1:])
+        transmit = self._ear_gain.reshape(2, *(1,) * (dx.ndim - 1)) * beam[0]
+        gain = transmit * beam[1:]
         return EarGeometry(
-            delay_s=self.head.latency_s + (distance[0] + distance[1:]) / c,
-            delay_per_m=(along[0] + along[1:]) / c,
-            delay_per_rad=(across[0] + across[1:]) / c,
-            gain=ear_gain * beam[0] * beam[1:],
-            gain_per_rad=ear_gain * (beam[0] * beam_slope[1:] + beam_slope[0] * beam[1:]),
-            tilt_s=(tilt[0] + tilt[1:]) / self.head.carrier_hz,
+            delay_s=self.head.latency_s + (travel[0] + travel[1:]),
+            delay_per_m=along[0] + along[1:],
+            delay_per_rad=across[0] + across[1:],
+            gain=gain,
+            gain_per_rad=transmit * beam_slope[1:] + gain * (beam_slope[0] / (beam[0] + 1e-12)),
+            tilt_s=(tilt[0] + tilt[1:]) * (1.0 / self.head.carrier_hz),
         )
+
+    def _offsets(
+        self, range_m: FloatArray, cos: FloatArray, sin: FloatArray
+    ) -> tuple[FloatArray, FloatArray]:
+        """From each transducer to the places, x and y, shape (3, ...)."""
+        ndim = np.ndim(range_m) + 1
+        return range_m * cos - self._column(0, ndim), range_m * sin - self._column(1, ndim)
+
+    def _column(self, number: int, ndim: int) -> FloatArray:
+        return self._places[number].reshape(3, *(1,) * (ndim - 1))
 
     def carrier(self, geometry: EarGeometry) -> ComplexArray:
         """Phase factors of both ears, exp(-j w (delay - mean delay)) with their mismatch.

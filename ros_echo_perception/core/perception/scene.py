@@ -10,7 +10,7 @@ import numpy as np
 
 from ..types import ComplexArray, FloatArray
 from .conditioning import Conditioned
-from .joint import Priors, Refined, core_of, excerpt, excerpts, refine, signals, window_of
+from .joint import Priors, Refined, excerpt, excerpts, refine, signals, window_of, windows_of
 from .model import HeadModel
 from .objects import Objects, no_objects
 from .search import Scan
@@ -96,10 +96,9 @@ class Scene:
         return len(self) - 1
 
     def _append(self, one: Objects, fitted: Fitted, rivals: Rivals, found: Scan | None) -> None:
-        window = window_of(self.model, self.ping, one)
+        window, core = windows_of(self.model, self.ping, one)
         rendered = signals(self.model, one, self.ping.time_s[window]).value[:, 0, :]
         sound = one.strength[0] * rendered
-        core = core_of(self.model, self.ping, one)
         self.objects = self.objects.join(one)
         self.items.append(Item(window, core, sound, fitted, rivals, found))
         self.residual[:, window] -= sound

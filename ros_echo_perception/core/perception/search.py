@@ -12,10 +12,10 @@ from ..types import ComplexArray, FloatArray
 from .conditioning import Conditioned
 from .model import HeadModel
 
-_FINE = 8
-_RANGE_STEP_M = 4e-3
+_FINE = 6
+_RANGE_STEP_M = 5e-3
 _PHASE_STEPS = 7
-_COARSE_BEARINGS = 73
+_COARSE_BEARINGS = 61
 
 
 def matched_filter(model: HeadModel, ping: Conditioned, samples: ComplexArray) -> FloatArray:
