@@ -5,6 +5,7 @@ from __future__ import annotations
 import enum
 import math
 from bisect import bisect_left, bisect_right
+from typing import NamedTuple
 
 import numpy as np
 
@@ -59,7 +60,7 @@ class PoseBuffer:
         self._x: list[float] = []
         self._y: list[float] = []
         self._yaw: list[float] = []  # unwrapped, so that linear interpolation turns the short way
-        self._variance: list[tuple[float, float, float]] = []
+        self._covariance: list[_Covariance] = []
         self._suspect: OdometrySample | None = None
 
     def __len__(self) -> int:
@@ -130,11 +131,11 @@ class PoseBuffer:
         self._x.insert(i, pose.x_m)
         self._y.insert(i, pose.y_m)
         self._yaw.insert(i, near + wrap_angle(pose.yaw_rad - near))
-        self._variance.insert(i, _variance(sample))
+        self._covariance.insert(i, _covariance(sample) or _UNKNOWN)
         # Trimmed in blocks: deleting from the front of a list moves all of it.
         excess = len(self._time) - self.max_samples
         if excess >= max(1, self.max_samples // 10):
-            for column in (self._time, self._x, self._y, self._yaw, self._variance):
+            for column in (self._time, self._x, self._y, self._yaw, self._covariance):
                 del column[:excess]
 
     def pose_at(self, time_s: float) -> Pose2:
@@ -188,18 +189,46 @@ class PoseBuffer:
                 )
         return low, high
 
-    def variance_growth(self, time_s: float, span_s: float) -> tuple[float, float, float]:
-        """By how much the variances of x, y and yaw grew over the last ``span_s``.
+    def relative_variance(self, time_s: float, span_s: float) -> tuple[float, float, float]:
+        """Variances of x, y and yaw of the motion over the last ``span_s``.
 
-        The absolute covariance of odometry grows for ever; content of a local map is only off
-        by what was added since it was mapped. Unknown covariances count as no growth.
+        The absolute covariance of odometry grows for ever; the content of a local map is only
+        off by what was added since it was mapped. For odometry that adds up steps with
+        independent errors this is ``P - F P0 F^T``, where F carries the earlier covariance P0
+        along the way: its share of heading error moves the place, too, and is no error of the
+        motion. Unknown covariances count as no growth.
         """
         if not self._time or span_s <= 0.0:
             return 0.0, 0.0, 0.0
         now = max(bisect_right(self._time, time_s) - 1, 0)
         then = max(bisect_right(self._time, time_s - span_s) - 1, 0)
-        new, old = self._variance[now], self._variance[then]
-        return max(new[0] - old[0], 0.0), max(new[1] - old[1], 0.0), max(new[2] - old[2], 0.0)
+        new, old = self._covariance[now], self._covariance[then]
+        dx, dy = self._x[now] - self._x[then], self._y[now] - self._y[then]
+        carried_x = old.x - 2.0 * dy * old.x_yaw + dy * dy * old.yaw
+        carried_y = old.y + 2.0 * dx * old.y_yaw + dx * dx * old.yaw
+        return (
+            max(new.x - carried_x, 0.0),
+            max(new.y - carried_y, 0.0),
+            max(new.yaw - old.yaw, 0.0),
+        )
+
+
+def has_broken_covariance(sample: OdometrySample) -> bool:
+    """Whether a sample brings a covariance that cannot be one; it counts as unknown."""
+    return sample.covariance is not None and _covariance(sample) is None
+
+
+class _Covariance(NamedTuple):
+    """What is kept of a covariance of (x, y, yaw)."""
+
+    x: float
+    y: float
+    yaw: float
+    x_yaw: float
+    y_yaw: float
+
+
+_UNKNOWN = _Covariance(0.0, 0.0, 0.0, 0.0, 0.0)
 
 
 def _is_valid(sample: OdometrySample) -> bool:
@@ -207,10 +236,14 @@ def _is_valid(sample: OdometrySample) -> bool:
     return all(map(math.isfinite, (sample.time_s, pose.x_m, pose.y_m, pose.yaw_rad)))
 
 
-def _variance(sample: OdometrySample) -> tuple[float, float, float]:
-    if sample.covariance is None or np.shape(sample.covariance) != (3, 3):
-        return 0.0, 0.0, 0.0
-    x, y, yaw = (float(v) for v in np.diagonal(sample.covariance))
-    if not (math.isfinite(x + y + yaw) and min(x, y, yaw) >= 0.0):
-        return 0.0, 0.0, 0.0
-    return x, y, yaw
+def _covariance(sample: OdometrySample) -> _Covariance | None:
+    """The covariance as far as it is used; None when there is none or it is impossible."""
+    given = sample.covariance
+    if given is None or np.shape(given) != (3, 3) or not np.all(np.isfinite(given)):
+        return None
+    x, y, yaw = (float(v) for v in np.diagonal(given))
+    x_yaw, y_yaw = (0.5 * float(given[i, 2] + given[2, i]) for i in (0, 1))
+    slack = 1.0 + 1e-6  # messages round
+    if min(x, y, yaw) < 0.0 or x_yaw**2 > slack * x * yaw or y_yaw**2 > slack * y * yaw:
+        return None
+    return _Covariance(x, y, yaw, x_yaw, y_yaw)

@@ -18,6 +18,7 @@ _NOISE_QUANTILE = 0.35
 _DIRECT_HEARD_S = 2.5e-3
 """Noise is measured after the direct pulse where the record is long enough."""
 _CLIP_ERROR = 0.1
+_CLIPPED_ERROR = 0.7
 _CLIP_REACH_S = 0.5e-3
 """Near clipped samples the flanks are distorted by what the converter cut off, by about this
 share of full scale."""
@@ -90,7 +91,9 @@ def condition(
             + (model_error * strong) ** 2
             + (_CLIP_ERROR * binary_dilation(baseband.clipped[ear], iterations=reach)) ** 2
         )
-        known = ~baseband.clipped[ear] & (baseband.time_s > direct.covered_s)
+        # A clipped sample still says when it was loud; by how much, it does not.
+        variance[ear] += np.where(baseband.clipped[ear], (_CLIPPED_ERROR * strong) ** 2, 0.0)
+        known = baseband.time_s > direct.covered_s
         weight[ear] = np.where(known, 1.0 / np.sqrt(variance[ear]), 0.0)
         blanking_end = max(blanking_end, direct.covered_s)
     return Conditioned(

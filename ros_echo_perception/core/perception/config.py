@@ -24,11 +24,19 @@ class ProcessingConfig(Settings):
         0.5, "Echoes less likely than this are not reported", "", 0.0, 1.0
     )
     max_echoes: int = setting(12, "At most this many echoes are fitted in one ping", "", 1, 40)
+    max_pair_searches: int = setting(
+        2,
+        "Times in a ping that two objects are looked for where one leaves too much behind; "
+        "each takes about as long as two echoes, 0 is fastest",
+        "",
+        0,
+        10,
+    )
     velocity_sigma_m_s: float = setting(
         0.7, "Usual radial speed between head and objects (1 sigma)", "m/s", 0.01, 10.0
     )
     temperature_sigma_c: float = setting(
-        0.3, "Error of the air temperature (1 sigma); it widens the range sigma", "degC", 0.0, 20.0
+        0.5, "Error of the air temperature (1 sigma); it widens the range sigma", "degC", 0.0, 20.0
     )
     default_temperature_c: float = setting(
         20.0, "Air temperature where the echo message has none", "degC", -40.0, 60.0

@@ -29,6 +29,7 @@ _MISFIT_SHARE = 0.7
 """A pair must gain a threshold; one object that leaves much less than that needs no look."""
 _MAX_LOOKS = 2
 _LOBES_TRIED = 3
+_CLIP_REACH_S = 0.5e-3
 _SURE_FACTOR = 6.0
 """An object whose linearised loss is this many thresholds needs no refit without it."""
 
@@ -77,7 +78,7 @@ class ObjectFitter:
 
     def fit(self, candidates: list[Candidate]) -> Explained:
         """Objects from candidates and from what the residual still shows."""
-        self._add_apart(candidates)
+        self._add_in_waves(candidates)
         self._split_misfits()
         self._add_from_residual()
         self._search_again()
@@ -86,22 +87,22 @@ class ObjectFitter:
 
     # ------------------------------------------------------------------ steps of fit()
 
-    def _add_apart(self, candidates: list[Candidate]) -> None:
-        """Candidates that stand apart are refined in one go, the others one after another."""
+    def _add_in_waves(self, candidates: list[Candidate]) -> None:
+        """The strongest candidate of each neighbourhood first, all of a wave at once."""
         reach = self.model.pulse_pair.core_end_s - self.model.pulse_pair.core_start_s
-        delay = np.array([c.mean_delay_s for c in candidates])
-        apart, close = [], []
-        for number, candidate in enumerate(candidates):
-            others = np.delete(delay, number)
-            lonely = not others.size or float(np.abs(others - delay[number]).min()) > reach
-            (apart if lonely else close).append(candidate.mean_delay_s)
-        starts = [f for f in (self._look(d) for d in apart) if f is not None]
-        if starts:
-            refined = self.scene.refined_apart([one for one, _ in starts])
-            for result, (_, found) in zip(refined, starts, strict=True):
-                self.scene.add(result, found=found)
-        for d in close:
-            self._try_add(d)
+        pending = [c.mean_delay_s for c in candidates]
+        while pending:
+            wave: list[float] = []
+            for delay in pending:
+                if all(abs(delay - other) > reach for other in wave):
+                    wave.append(delay)
+            pending = [d for d in pending if d not in wave]
+            starts = [found for found in map(self._look, wave) if found is not None]
+            if starts:
+                refined = self.scene.refined_apart([one for one, _ in starts])
+                for result, (_, found) in zip(refined, starts, strict=True):
+                    self.scene.add(result, found=found)
+                self.scene.settle_all()
 
     def _look(self, delay_s: float) -> tuple[Objects, Scan] | None:
         """The best object near a delay, unless noise or a click explains what is there."""
@@ -114,15 +115,29 @@ class ObjectFitter:
         residual = self.scene.residual
         found = scan(self.model, self.ping, residual, range_m, width, self.bearings)
         best_range, best_bearing, strength, gain = found.best()
-        if gain < self.threshold or self._take_off_click(delay_s, gain):
+        if gain < self.threshold or self._beside_clipped(delay_s):
+            return None
+        if self._take_off_click(delay_s, gain):
             return None
         return one_object(best_range, best_bearing, strength), found
+
+    def _beside_clipped(self, delay_s: float) -> bool:
+        """Whether an object already accounts for the overdriven stretch at a delay.
+
+        What a clipped echo leaves behind looks like more echoes, but is distortion.
+        """
+        pair, time_s = self.model.pulse_pair, self.ping.time_s
+        first = int(np.searchsorted(time_s, delay_s + pair.start_s - _CLIP_REACH_S))
+        last = int(np.searchsorted(time_s, delay_s + pair.end_s))
+        if not self.ping.clipped[:, first:last].any():
+            return False
+        return any(i.core.start <= last and i.core.stop > first for i in self.scene.items)
 
     def _try_add(self, delay_s: float) -> None:
         start = self._look(delay_s)
         if start is not None:
             new = self.scene.add_unrefined(start[0])
-            self.scene.settle(self.scene.cluster(new))
+            self.scene.settle([self.scene.cluster(new)])
 
     def _take_off_click(self, delay_s: float, object_gain: float) -> bool:
         peak_s = delay_s + self.model.pulses[0].peak_time_s
@@ -141,7 +156,7 @@ class ObjectFitter:
         Two objects at one range pose as one between them, a maximum of the likelihood for one
         object from which no small step leads away.
         """
-        for _ in range(_MAX_LOOKS):
+        for _ in range(self.config.max_pair_searches):
             misfit = [self.scene.misfit(i) for i in range(len(self.scene))]
             if not misfit or max(misfit) < _MISFIT_SHARE * self.threshold:
                 return
@@ -186,7 +201,7 @@ class ObjectFitter:
             pairs = self._close_pairs()
             if not any(self._try_merge(pair) for pair in pairs):
                 break
-        for pair in self._close_pairs()[:_MAX_LOOKS]:
+        for pair in self._close_pairs()[: self.config.max_pair_searches]:
             if not any(self.scene.rivals(pair)):
                 self._try_pairs(pair)
 
@@ -200,7 +215,7 @@ class ObjectFitter:
             rest = [i for i in scene.cluster(weakest) if i != weakest]
             scene.remove([weakest])
             if rest:
-                scene.settle([i - (i > weakest) for i in rest])
+                scene.settle([[i - (i > weakest) for i in rest]])
             gain = self._gains()
         return Explained(scene, gain, self.threshold, self.interference)
 

@@ -22,7 +22,7 @@ from .model import HeadModel
 from .objects import Objects
 
 _ROUNDS = 12
-_TOLERANCE = 1e-2  # of the cost, nats
+_TOLERANCE = 2e-3  # of the cost, nats
 _MAX_STEP_M, _MAX_STEP_RAD = 0.02, 0.05
 _UNKNOWNS = 5  # of an object: range, bearing, velocity, two parts of the strength
 
@@ -44,12 +44,12 @@ def signals(model: HeadModel, objects: Objects, time_s: FloatArray) -> Signals:
     lag = time_s - geometry.delay_s[:, :, None]  # (2, k, n)
     pulse, slope = model.pulse_pair.evaluate(lag)
     # Velocity turns the phase about the pulse's peak, so that it is not confounded with phase.
-    turning_s = lag - model.pulses[0].peak_time_s
+    turning_s, turning_rate = model.pulse_pair.turning(lag)
     omega_d = model.doppler_rad_s_per_m_s * objects.velocity_m_s[:, None]
     if np.any(objects.velocity_m_s):
         factor = factor * np.exp(1j * omega_d * turning_s)
     value = factor * (pulse + (geometry.tilt_s[:, :, None] / (2j * math.pi)) * slope)
-    moved = -factor * slope - 1j * omega_d * value
+    moved = -factor * slope - 1j * omega_d * turning_rate * value
     phase = (-1j * model.omega) * value
     relative_gain = geometry.gain_per_rad / np.maximum(geometry.gain, 1e-9)
     by_range, by_bearing = geometry.delay_per_m, geometry.delay_per_rad
@@ -117,16 +117,15 @@ def excerpt(ping: Conditioned, samples: ComplexArray, window: slice, copies: int
     )
 
 
-def excerpts(ping: Conditioned, samples: ComplexArray, windows: list[slice]) -> Excerpts:
-    """A stretch of its own for each problem; all get the length of the longest."""
+def excerpts(ping: Conditioned, samples: list[ComplexArray], windows: list[slice]) -> Excerpts:
+    """A stretch of its own samples (2, n) for each problem, all as long as the longest."""
     n = max(w.stop - w.start for w in windows)
     index = np.array([w.start for w in windows])[:, None] + np.arange(n)
     inside = index < ping.time_s.size
     index = np.minimum(index, ping.time_s.size - 1)
     weight = np.where(inside, ping.weight[:, index], 0.0)
-    return Excerpts(
-        ping.time_s[index], samples[:, index].transpose(1, 0, 2), weight.transpose(1, 0, 2)
-    )
+    parts = np.stack([own[:, row] for own, row in zip(samples, index, strict=True)])
+    return Excerpts(ping.time_s[index], parts, weight.transpose(1, 0, 2))
 
 
 def refine(

@@ -8,16 +8,20 @@ from functools import lru_cache
 
 import numpy as np
 
-from ..acoustics import echo_spectrum
+from ..acoustics import burst_spectrum, echo_spectrum, resonance_response
 from ..head import Head
 from ..types import ComplexArray, FloatArray
 from .baseband import ReceiverFilter
+
+Mask = np.ndarray[tuple[int], np.dtype[np.bool_]]
 
 _OVERSAMPLING = 32
 _SPAN_S = 8e-3
 _LEAD_S = 1e-3
 _TAIL_AMPLITUDE = 3e-4
 _CORE_AMPLITUDE = 0.02
+_SHIFT_HZ = 20.0
+_FAINT = 1e-3
 
 
 @dataclass(frozen=True, eq=False)
@@ -26,10 +30,16 @@ class PulseTemplate:
 
     Times count from the start of the drive. ``table`` and ``slope`` (its derivative by time)
     are sampled every ``fine_step_s`` from ``first_time_s`` on; outside they are 0.
+
+    A Doppler shift w (rad/s) of what arrives turns the pulse into about
+    table * exp(1j * w * turning_s). While the receiver is driven, ``turning_s`` is the time; once
+    it rings by itself, it does so at its own resonance and the time stands still. The imaginary
+    part says what the receiver's band does to the strength.
     """
 
     table: ComplexArray
     slope: ComplexArray
+    turning_s: ComplexArray
     first_time_s: float
     fine_step_s: float
     peak_time_s: float
@@ -75,21 +85,35 @@ class PulsePair:
         self._fine_step_s = pulses[0].fine_step_s
         self._size = int(round((self.end_s - self.start_s) / self._fine_step_s)) + 2
         self._table = np.zeros((2, 2 * self._size), complex)  # value and slope; both ears
+        self._turning = np.zeros((2, 2 * self._size), complex)  # turning time and its slope
+        # No turn at the left pulse's peak, so that velocity is not confounded with phase.
+        at_peak = int(round((pulses[0].peak_time_s - pulses[0].first_time_s) / self._fine_step_s))
         for ear, pulse in enumerate(pulses):
             first = int(round((pulse.first_time_s - self.start_s) / self._fine_step_s))
             part = slice(ear * self._size + first, ear * self._size + first + pulse.table.size)
             self._table[0, part] = pulse.table
             self._table[1, part] = pulse.slope
+            self._turning[0, part] = pulse.turning_s - pulses[0].turning_s[at_peak]
+            self._turning[1, part] = np.gradient(pulse.turning_s, self._fine_step_s)
 
     def evaluate(self, time_s: FloatArray) -> tuple[ComplexArray, ComplexArray]:
         """Value and derivative at times of shape (2, ...), left ear first."""
+        return self._look_up(self._table, time_s)
+
+    def turning(self, time_s: FloatArray) -> tuple[ComplexArray, ComplexArray]:
+        """Turning time (see `PulseTemplate`) and its derivative, like `evaluate`."""
+        return self._look_up(self._turning, time_s)
+
+    def _look_up(
+        self, table: ComplexArray, time_s: FloatArray
+    ) -> tuple[ComplexArray, ComplexArray]:
         position = (time_s - self.start_s) / self._fine_step_s
         np.minimum(np.maximum(position, 0.0, out=position), self._size - 1 - 1e-9, out=position)
         index = position.astype(np.intp)
         fraction = position - index
         index[1] += self._size
-        low = self._table[:, index]
-        value, slope = low + fraction * (self._table[:, index + 1] - low)
+        low = table[:, index]
+        value, slope = low + fraction * (table[:, index + 1] - low)
         return value, slope
 
 
@@ -128,6 +152,7 @@ def _template(
     spectrum[band] *= receiver.response(offset_hz[band])
     spectrum[band] *= np.exp(-2j * math.pi * offset_hz[band] * _LEAD_S)
     table = np.fft.ifft(spectrum)
+    turning_s = _turning(head.head, burst_cycles, frequency_hz, spectrum, band)
     magnitude = np.abs(table)
     peak = int(np.argmax(magnitude))
     table = table / magnitude[peak]
@@ -141,6 +166,7 @@ def _template(
     return PulseTemplate(
         table=_zero_ended(table[first : last + 2]),
         slope=_zero_ended(slope[first : last + 2]),
+        turning_s=turning_s[first : last + 2],
         first_time_s=first * step_s - _LEAD_S,
         fine_step_s=step_s,
         peak_time_s=peak * step_s - _LEAD_S,
@@ -148,6 +174,27 @@ def _template(
         energy_s=energy_s,
         noise_bandwidth_hz=float(np.sum(power) / np.max(power)) / (n * step_s),
     )
+
+
+def _turning(
+    head: Head, burst_cycles: float, frequency_hz: FloatArray, spectrum: ComplexArray, band: Mask
+) -> ComplexArray:
+    """d ln(pulse) / d(1j w) for a shift w of what the transmitter sends."""
+
+    def sent(shift_hz: float) -> ComplexArray:
+        shifted = frequency_hz - shift_hz
+        burst = burst_spectrum(shifted, head.carrier_hz, burst_cycles, head.drive_waveform)
+        return burst * resonance_response(head.transmitter, shifted)
+
+    change = np.zeros(spectrum.size, complex)
+    # What follows the transmitter does not move: divide its spectrum out where it has any.
+    here = sent(0.0)
+    strong = np.abs(here) > 1e-9 * np.abs(here).max()
+    slope = (sent(_SHIFT_HZ) - sent(-_SHIFT_HZ)) / (4.0 * math.pi * _SHIFT_HZ)
+    change[band] = spectrum[band] * np.where(strong, slope / np.where(strong, here, 1.0), 0.0)
+    table, moved = np.fft.ifft(spectrum), np.fft.ifft(change)
+    power = np.abs(table) ** 2
+    return np.asarray(-1j * moved * table.conj() / (power + _FAINT**2 * power.max()))
 
 
 def _zero_ended(values: ComplexArray) -> ComplexArray:

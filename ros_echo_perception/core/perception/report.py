@@ -13,6 +13,7 @@ from .bearing import BearingPosterior, among_rivals, bearing_posterior
 from .conditioning import Conditioned
 from .config import ProcessingConfig
 from .model import HeadModel
+from .multipath import flag_multipath
 from .objects import Objects
 from .scene import Explained, Scene
 from .search import bearing_grid, scan
@@ -20,6 +21,8 @@ from .search import bearing_grid, scan
 _POSTERIOR_HALF_WIDTH_M = 0.012
 _NOMINAL_LEVEL_ERROR = 0.2
 """1.5 dB between the ears (log ratio 0.17) and 1.5 degrees of yaw: usual tolerances."""
+_NOMINAL_LATENCY_SIGMA_S = 40e-6
+"""Drivers and transducers delay a burst by some tens of microseconds (common practice)."""
 _HEARD_DB = 8.0
 """An ear hears an echo from this SNR on; below, noise reaches it now and then."""
 
@@ -36,7 +39,7 @@ def report_detections(
         if d.existence_probability >= config.min_existence_probability
         and nearest_m <= d.range_m <= config.max_range_m
     ]
-    return tuple(sorted(wanted, key=lambda d: d.range_m))
+    return flag_multipath(sorted(wanted, key=lambda d: d.range_m))
 
 
 def _detection(
@@ -95,9 +98,14 @@ def level_error(head: Head) -> float:
 def _range_sigma(
     range_m: float, variance_m2: float, model: HeadModel, config: ProcessingConfig
 ) -> float:
-    # A wrong temperature stretches all ranges: d ln c / dT is about 0.18 % per kelvin.
+    """What the fit leaves, widened by air, latency and the unknown curvature of the object."""
     slope = (speed_of_sound(21.0) - speed_of_sound(20.0)) / model.speed_m_s
-    return math.hypot(math.sqrt(max(variance_m2, 0.0)), range_m * slope * config.temperature_sigma_c)
+    air_m = range_m * slope * config.temperature_sigma_c
+    known = model.head.calibration.get("sigma", {})
+    latency_m = 0.5 * model.speed_m_s * float(known.get("latency", _NOMINAL_LATENCY_SIGMA_S))
+    # A flat object's mirror image answers h^2 / (8 r) later than a point, h half the baseline.
+    curvature_m = (model.head.baseline_m / 2.0) ** 2 / (8.0 * range_m)
+    return math.hypot(math.sqrt(max(variance_m2, 0.0)), air_m, latency_m, curvature_m)
 
 
 def _per_ear(

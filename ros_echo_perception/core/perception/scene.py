@@ -144,7 +144,12 @@ class Scene:
             ]
             if not stale:
                 return
-            self.settle(self.cluster(stale[0]))
+            apart: list[list[int]] = []
+            for i in stale:
+                members = self.cluster(i)
+                if not any(set(members) & set(other) for other in apart):
+                    apart.append(members)
+            self.settle(apart)
 
     def _together(self, i: int) -> bool:
         group = self.items[i].fitted.group
@@ -171,13 +176,31 @@ class Scene:
     def refined_apart(self, objects: list[Objects]) -> list[Refined]:
         """Single objects that do not overlap, each fitted to the residual around it."""
         windows = [window_of(self.model, self.ping, one) for one in objects]
-        data = excerpts(self.ping, self.residual, windows)
+        data = excerpts(self.ping, [self.residual] * len(windows), windows)
         return refine(self.model, data, objects, self.priors)
 
-    def settle(self, members: Sequence[int]) -> list[int]:
-        """Refine members together; returns their new numbers."""
-        refined = self.refined(self.objects.take(members), self.alone(members), self.span(members))
-        return self.replace(members, refined, self.rivals(members))
+    def settle(self, clusters: Sequence[Sequence[int]]) -> None:
+        """Refine the members of each cluster together; clusters of a size go in one run.
+
+        No object may be in two clusters.
+        """
+        groups: dict[int, list[list[Item]]] = {}
+        for members in clusters:
+            groups.setdefault(len(members), []).append([self.items[i] for i in members])
+        for group in groups.values():
+            numbers = [[self._number(item) for item in items] for items in group]
+            samples = [self.alone(members) for members in numbers]
+            windows = [self.span(members) for members in numbers]
+            starts = [self.objects.take(members) for members in numbers]
+            refined = refine(
+                self.model, excerpts(self.ping, samples, windows), starts, self.priors
+            )
+            for items, result in zip(group, refined, strict=True):
+                members = [self._number(item) for item in items]
+                self.replace(members, result, self.rivals(members))
+
+    def _number(self, item: Item) -> int:
+        return next(i for i, known in enumerate(self.items) if known is item)
 
     def silence_cost(self, samples: ComplexArray, window: slice) -> float:
         """Cost of explaining the samples by noise alone."""

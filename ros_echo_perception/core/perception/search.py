@@ -12,10 +12,10 @@ from ..types import ComplexArray, FloatArray
 from .conditioning import Conditioned
 from .model import HeadModel
 
-_FINE = 6
-_RANGE_STEP_M = 5e-3
+_FINE = 8
+_RANGE_STEP_M = 4e-3
 _PHASE_STEPS = 7
-_COARSE_BEARINGS = 61
+_COARSE_BEARINGS = 73
 
 
 def matched_filter(model: HeadModel, ping: Conditioned, samples: ComplexArray) -> FloatArray:
@@ -109,7 +109,8 @@ class Scan:
         phase = self.phase_rad
         turn = np.angle(np.exp(1j * np.diff(phase)))
         # The phase wraps at +-pi; a step that crosses 0 keeps its size when unwrapped.
-        crosses = (phase[:-1] * (phase[:-1] + turn) <= 0.0) & (np.abs(phase[:-1]) < math.pi / 2)
+        crosses = (phase[:-1] == 0.0) | (phase[:-1] * (phase[:-1] + turn) < 0.0)
+        crosses &= np.abs(phase[:-1]) < math.pi / 2
         at = np.nonzero(crosses & (turn != 0.0))[0]
         share = -phase[at] / turn[at]
         return np.asarray(

@@ -18,7 +18,7 @@ from .joint import signals, window_of
 from .model import HeadModel
 from .objects import Objects
 
-_MAX_PLACES = 520
+_MAX_PLACES = 400
 _RANGE_STEPS = 2  # on each side of the centre
 _PHASE_STEPS = 5.0
 _MIN_GAIN = 0.15
