@@ -8,14 +8,17 @@ from __future__ import annotations
 import enum
 import math
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from .errors import InvalidEchoError, refuse
 
-FloatArray = NDArray[np.float64]
-ComplexArray = NDArray[np.complex128]
+FloatArray = NDArray[np.floating[Any]]
+ComplexArray = NDArray[np.complexfloating[Any, Any]]
+BoolArray = NDArray[np.bool_]
+IndexArray = NDArray[np.intp]
 LEFT, RIGHT = 0, 1
 """Index of the ears along the first axis of every two-eared array."""
 

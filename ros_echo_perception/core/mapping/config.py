@@ -148,11 +148,24 @@ class MappingConfig(Settings):
         1e6,
     )
     covariance_span_s: float = setting(
-        10.0,
-        "The growth of the odometry's covariance over this time widens the echoes; 0: it does not",
+        5.0,
+        "What the odometry's covariance adds over this time widens the echoes, since echoes have "
+        "to agree over such a time; 0: it does not",
         "s",
         0.0,
         600.0,
+    )
+    max_pose_sigma_m: float = setting(
+        0.05, "The odometry widens echoes by at most this (1 sigma)", "m", 0.0, 0.5
+    )
+    max_pose_sigma_rad: float = setting(
+        0.03, "The odometry turns echoes by at most this (1 sigma)", "rad", 0.0, 0.5
+    )
+    max_range_sigma_m: float = setting(
+        0.2, "Echoes whose range is less certain than this (1 sigma) are not used", "m", 0.005, 1.0
+    )
+    max_detections: int = setting(
+        32, "Of each ping the most probable echoes up to this number are used", "", 1, 1000
     )
 
     def check_together(self) -> None:

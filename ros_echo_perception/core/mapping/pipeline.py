@@ -24,7 +24,7 @@ from .evidence import (
 from .grid import MapSnapshot, RollingGrid
 from .hypotheses import hypotheses_of, is_valid
 from .pending import PendingPings, WaitingPing
-from .poses import PoseBuffer, PoseOutcome
+from .poses import PoseBuffer, PoseOutcome, has_broken_covariance
 from .sensor_model import clear_view, share
 from .update import GridUpdater
 
@@ -61,7 +61,9 @@ class LocalMapper:
     ----------
     counts
         How often each outcome has occurred, by name (values of `MapOutcome`,
-        `PoseOutcome`, ``detections_used``, ``detections_invalid``, ``map_cleared``).
+        `PoseOutcome`, ``map_cleared``, ``detections_used``, ``detections_invalid``,
+        ``detections_vague`` (range too uncertain), ``detections_excess`` (too many in a ping),
+        ``covariance_invalid`` (impossible, taken as unknown), ``covariance_capped``).
 
     Examples
     --------
@@ -98,6 +100,7 @@ class LocalMapper:
         """Take one odometry sample and fuse the pings that waited for it; never raises."""
         outcome = self._poses.add(sample)
         self.counts[outcome.value] += 1
+        self.counts["covariance_invalid"] += has_broken_covariance(sample)
         if outcome in (PoseOutcome.RESTARTED, PoseOutcome.JUMPED):
             self.clear()
         if outcome is PoseOutcome.RESTARTED:
@@ -176,8 +179,7 @@ class LocalMapper:
         except OdometryGapError:
             return MapOutcome.SKIPPED_NO_ODOMETRY
         moved = self.grid.centre_on(robot.x_m, robot.y_m)
-        growth = self._poses.variance_growth(time_s, config.covariance_span_s)
-        possible = hypotheses_of(detections, heads, growth, config)
+        possible = hypotheses_of(detections, heads, self._pose_variance(time_s), config)
         paths, path_cells = free_paths(possible, self.grid, result.range_min_m, config)
         clear = clear_view(possible, paths, self._updater.read(path_cells, time_s))
         arcs, arc_cells = arcs_of(possible, self.grid, config)
@@ -194,15 +196,36 @@ class LocalMapper:
         self.counts["detections_used"] += len(detections)
         return MapOutcome.FUSED
 
+    def _pose_variance(self, time_s: float) -> tuple[float, float, float]:
+        """Variances of x, y, yaw by which the odometry widens echoes, bounded and counted.
+
+        Bounded because an absurd covariance would otherwise smear each echo over the window.
+        """
+        config = self.config
+        limits = (config.max_pose_sigma_m, config.max_pose_sigma_m, config.max_pose_sigma_rad)
+        grown = self._poses.relative_variance(time_s, config.covariance_span_s)
+        x, y, yaw = (min(g, limit**2) for g, limit in zip(grown, limits, strict=True))
+        self.counts["covariance_capped"] += (x, y, yaw) != grown
+        return x, y, yaw
+
     def _usable(self, result: PingResult) -> list[Detection]:
+        config = self.config
         valid = [d for d in result.detections if is_valid(d)]
-        self.counts["detections_invalid"] += len(result.detections) - len(valid)
-        return [
+        sharp = [d for d in valid if d.range_sigma_m <= config.max_range_sigma_m]
+        used = [
             d
-            for d in valid
-            if d.range_m <= self.config.max_range_m
-            and d.existence_probability >= self.config.min_existence_probability
+            for d in sharp
+            if d.range_m <= config.max_range_m
+            and d.existence_probability >= config.min_existence_probability
         ]
+        excess = len(used) - config.max_detections
+        if excess > 0:
+            least = sorted(range(len(used)), key=lambda i: used[i].existence_probability)[:excess]
+            used = [d for i, d in enumerate(used) if i not in set(least)]
+        self.counts["detections_invalid"] += len(result.detections) - len(valid)
+        self.counts["detections_vague"] += len(valid) - len(sharp)
+        self.counts["detections_excess"] += max(excess, 0)
+        return used
 
 
 def _is_valid_ping(result: PingResult) -> bool:

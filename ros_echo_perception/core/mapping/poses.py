@@ -14,6 +14,8 @@ from ..types import FloatArray, OdometrySample, Pose2, wrap_angle
 
 _JUMP_SLACK_M = 0.05
 _JUMP_SLACK_RAD = 0.05
+_MAX_VARIANCE = 1e9
+"""Larger ones are a way to say that nothing is known."""
 
 
 class PoseOutcome(enum.Enum):
@@ -243,7 +245,9 @@ def _covariance(sample: OdometrySample) -> _Covariance | None:
         return None
     x, y, yaw = (float(v) for v in np.diagonal(given))
     x_yaw, y_yaw = (0.5 * float(given[i, 2] + given[2, i]) for i in (0, 1))
+    if min(x, y, yaw) < 0.0 or max(x, y, yaw) > _MAX_VARIANCE:
+        return None
     slack = 1.0 + 1e-6  # messages round
-    if min(x, y, yaw) < 0.0 or x_yaw**2 > slack * x * yaw or y_yaw**2 > slack * y * yaw:
+    if x_yaw * x_yaw > slack * x * yaw or y_yaw * y_yaw > slack * y * yaw:
         return None
     return _Covariance(x, y, yaw, x_yaw, y_yaw)

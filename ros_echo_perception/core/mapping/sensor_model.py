@@ -40,7 +40,8 @@ from .hypotheses import Hypotheses
 
 _SPAN_SIGMAS = 2.5
 _GOLDEN_SECTION = 0.618034
-_MAX_ARC_SAMPLES = 1023
+_MAX_SAMPLES = 12_000
+_MIN_RANGE_SAMPLES, _MIN_BEARING_SAMPLES = 5, 11
 _MIN_RANGE_SIGMA_CELLS = 0.25
 _MARGIN_CELLS = 1.5
 _BLOCK_MARGIN_M = 0.2
@@ -72,14 +73,17 @@ def arc_samples(
 
     They lie closer than the cells, and each row is shifted against the one before by the
     golden section, so that no row of points falls on one side of a border of cells as a whole.
+    If it came to more than `_MAX_SAMPLES` points, the widest hypotheses, which say the least
+    of any one cell, get fewer: the work on a ping is bounded whatever its detections say.
     """
     h = hypotheses
     range_sigma = np.hypot(h.range_sigma_m, _MIN_RANGE_SIGMA_CELLS * resolution_m)
     range_span = _SPAN_SIGMAS * range_sigma
     spread = np.hypot(h.spread_rad, surface_width_m / h.range_m)
-    bearing_span = np.where(h.uniform, h.spread_rad, _SPAN_SIGMAS * spread)
-    n_range = _count(2.0 * range_span, 0.4 * resolution_m, 5)
-    n_bearing = _count(2.0 * bearing_span * h.range_m, 0.9 * resolution_m, 11)
+    bearing_span = np.minimum(np.where(h.uniform, h.spread_rad, _SPAN_SIGMAS * spread), math.pi)
+    n_range = _count(2.0 * range_span, 0.4 * resolution_m, _MIN_RANGE_SAMPLES)
+    n_bearing = _count(2.0 * bearing_span * h.range_m, 0.9 * resolution_m, _MIN_BEARING_SAMPLES)
+    n_range, n_bearing = _within_budget(n_range, n_bearing)
     owner, k = _ragged(n_range * n_bearing)
     across, along = k % n_bearing[owner], k // n_bearing[owner]
     u = -1.0 + 2.0 * (along + (across * _GOLDEN_SECTION) % 1.0) / n_range[owner]
@@ -178,8 +182,25 @@ def silent_samples(
 
 def _count(length_m: FloatArray, pitch_m: float, at_least: int) -> IntArray:
     """Points on a stretch so that they lie no further apart than the pitch."""
-    n = np.ceil(length_m / pitch_m).astype(np.int64) + 1
-    return np.clip(n, at_least, _MAX_ARC_SAMPLES)
+    n = np.ceil(np.minimum(length_m / pitch_m, 1e6)).astype(np.int64) + 1
+    return np.maximum(n, at_least)
+
+
+def _within_budget(n_range: IntArray, n_bearing: IntArray) -> tuple[IntArray, IntArray]:
+    """Numbers of points, fewer for those with the most where all come to too many."""
+    wanted = (n_range * n_bearing).astype(float)
+    if wanted.sum() <= _MAX_SAMPLES:
+        return n_range, n_bearing
+    # The highest limit for each that keeps the sum: with k of them below it, the rest share
+    # what those leave.
+    ordered = np.sort(wanted)
+    left = _MAX_SAMPLES - np.concatenate([[0.0], np.cumsum(ordered)[:-1]])
+    limit = float(np.max(left / np.arange(wanted.size, 0, -1)))
+    factor = np.sqrt(np.minimum(limit / wanted, 1.0))
+    return (
+        np.maximum((n_range * factor).astype(np.int64), _MIN_RANGE_SAMPLES),
+        np.maximum((n_bearing * factor).astype(np.int64), _MIN_BEARING_SAMPLES),
+    )
 
 
 def _ragged(counts: IntArray) -> tuple[IntArray, IntArray]:

@@ -10,7 +10,7 @@ import numpy as np
 from scipy.signal import firwin, upfirdn
 
 from ..head import Head
-from ..types import ComplexArray, FloatArray, RawEcho
+from ..types import BoolArray, ComplexArray, FloatArray, IndexArray, RawEcho
 
 _RATE_PER_BANDWIDTH = 4.0
 """Complex rate over the widest receiver bandwidth: the pulse's skirts fit, noise stays white."""
@@ -92,7 +92,7 @@ class Baseband:
     samples: ComplexArray
     time_s: FloatArray
     step_s: float
-    clipped: np.ndarray[tuple[int, int], np.dtype[np.bool_]]
+    clipped: BoolArray
     gain: FloatArray
 
 
@@ -130,9 +130,7 @@ def to_baseband(echo: RawEcho, receiver: ReceiverFilter) -> Baseband:
     )
 
 
-def _clipped(
-    echo: RawEcho, receiver: ReceiverFilter, sample_index: np.ndarray
-) -> np.ndarray[tuple[int, int], np.dtype[np.bool_]]:
+def _clipped(echo: RawEcho, receiver: ReceiverFilter, sample_index: IndexArray) -> BoolArray:
     result = np.zeros((2, sample_index.size), bool)
     full = echo.full_scale
     # The highest positive code of an N-bit converter in 16 bits is one step below full scale.

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.ndimage import binary_dilation, maximum_filter1d
 
-from ..types import ComplexArray, FloatArray, FrontEndFlag, PingFlag, RawEcho
+from ..types import BoolArray, ComplexArray, FloatArray, FrontEndFlag, PingFlag, RawEcho
 from .baseband import Baseband
 from .direct import direct_pulse
 from .model import HeadModel
@@ -52,7 +52,7 @@ class Conditioned:
     step_s: float
     noise_sigma: tuple[float, float]
     alive: tuple[bool, bool]
-    clipped: np.ndarray[tuple[int, int], np.dtype[np.bool_]]
+    clipped: BoolArray
     blanking_end_s: float
     flags: PingFlag
 

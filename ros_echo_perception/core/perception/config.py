@@ -11,9 +11,7 @@ from ..settings import Settings, setting
 class ProcessingConfig(Settings):
     """How raw echoes become detections. What the head is, the head file says."""
 
-    max_range_m: float = setting(
-        8.0, "Echoes beyond this range are not looked for", "m", 0.3, 30.0
-    )
+    max_range_m: float = setting(8.0, "Echoes beyond this range are not looked for", "m", 0.3, 30.0)
     max_bearing_rad: float = setting(
         1.9, "Bearings are looked for from minus to plus this angle", "rad", 0.2, 2.4
     )

@@ -9,7 +9,7 @@ import numpy as np
 from scipy.interpolate import CubicSpline
 
 from ..head import Head
-from ..types import ComplexArray
+from ..types import ComplexArray, FloatArray
 from .baseband import Baseband
 from .pulse import PulseTemplate
 
@@ -35,7 +35,7 @@ class DirectPulse:
     """
 
     samples: ComplexArray
-    error: np.ndarray
+    error: FloatArray
     covered_s: float
 
 

@@ -98,6 +98,7 @@ class ObjectFitter:
                     wave.append(delay)
             pending = [d for d in pending if d not in wave]
             starts = [found for found in map(self._look, wave) if found is not None]
+            starts = starts[: self.config.max_echoes - len(self.scene)]
             if starts:
                 refined = self.scene.refined_apart([one for one, _ in starts])
                 for result, (_, found) in zip(refined, starts, strict=True):
@@ -239,9 +240,7 @@ class ObjectFitter:
 
     def _close_pairs(self) -> list[list[int]]:
         r = self.scene.objects.range_m
-        return [
-            [j, i] for i in range(r.size) for j in range(i) if abs(r[i] - r[j]) < self._reach_m
-        ]
+        return [[j, i] for i in range(r.size) for j in range(i) if abs(r[i] - r[j]) < self._reach_m]
 
     def _try_merge(self, pair: list[int]) -> bool:
         samples = self.scene.alone(pair)
@@ -331,6 +330,4 @@ def rivals_of(best: Objects, pairs: list[Objects], weight: FloatArray) -> list[R
     bearings = np.array([np.sort(p.bearing_rad) for p in pairs])[order]
     share = weight[order] / weight[order].sum()
     rank = np.argsort(np.argsort(best.bearing_rad))
-    return [
-        tuple(zip(bearings[:, r].tolist(), share.tolist(), strict=True)) for r in rank.tolist()
-    ]
+    return [tuple(zip(bearings[:, r].tolist(), share.tolist(), strict=True)) for r in rank.tolist()]

@@ -16,7 +16,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..types import ComplexArray, FloatArray
+from ..types import BoolArray, ComplexArray, FloatArray
 from .conditioning import Conditioned
 from .model import HeadModel
 from .objects import Objects
@@ -64,7 +64,7 @@ def signals(model: HeadModel, objects: Objects, time_s: FloatArray) -> Signals:
 
 def _relative(slope: FloatArray) -> FloatArray:
     """Of each ear against the mean of both."""
-    return slope - 0.5 * (slope[0] + slope[1])
+    return np.asarray(slope - 0.5 * (slope[0] + slope[1]))
 
 
 @dataclass(frozen=True, eq=False)
@@ -140,7 +140,7 @@ def refine(
     """
     problem = _Problems(model, data, priors)
     state = problem.evaluate(_joined(problems))
-    damping = np.full(len(problems), 1e-3)
+    damping: FloatArray = np.full(len(problems), 1e-3)
     normal, gradient = problem.normal_equations(state)
     for _ in range(_ROUNDS):
         diagonal = np.einsum("bii->bi", normal)
@@ -239,16 +239,17 @@ class _Problems:
             objects.strength + step[:, 3] + 1j * step[:, 4],
         )
 
-    def chosen(self, better: np.ndarray, trial: _State, old: _State) -> _State:
+    def chosen(self, better: BoolArray, trial: _State, old: _State) -> _State:
         """The trial where it is better, the old state elsewhere."""
         if not better.any():
             return old
         each = np.repeat(better, len(old.objects) // self.b)
+        new, kept = trial.objects, old.objects
         objects = Objects(
-            *(
-                np.where(each, new, before)
-                for new, before in zip(trial.objects.columns(), old.objects.columns(), strict=True)
-            )
+            np.where(each, new.range_m, kept.range_m),
+            np.where(each, new.bearing_rad, kept.bearing_rad),
+            np.where(each, new.velocity_m_s, kept.velocity_m_s),
+            np.where(each, new.strength, kept.strength),
         )
         mask = each[None, :, None]
         rendered = Signals(

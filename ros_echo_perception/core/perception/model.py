@@ -63,7 +63,7 @@ class HeadModel:
         """Delays of both ears since the emission, shape (2, ...) for places of shape (...)."""
         dx, dy = self._offsets(range_m, np.cos(bearing_rad), np.sin(bearing_rad))
         distance = np.sqrt(dx * dx + dy * dy + self._column(2, dx.ndim))
-        return self.head.latency_s + (distance[0] + distance[1:]) / self.speed_m_s
+        return np.asarray(self.head.latency_s + (distance[0] + distance[1:]) / self.speed_m_s)
 
     def geometry(self, range_m: FloatArray, bearing_rad: FloatArray) -> EarGeometry:
         """Delays since the emission and gains of both ears, with derivatives.

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..types import ComplexArray, FloatArray
+from ..types import ComplexArray, FloatArray, IndexArray
 
 
 @dataclass(frozen=True, eq=False)
@@ -22,19 +22,21 @@ class Objects:
     def __len__(self) -> int:
         return int(self.range_m.size)
 
-    def columns(self) -> tuple[FloatArray, FloatArray, FloatArray, ComplexArray]:
-        """The four arrays in the order of the fields."""
-        return self.range_m, self.bearing_rad, self.velocity_m_s, self.strength
-
-    def take(self, index: Sequence[int] | np.ndarray) -> Objects:
+    def take(self, index: Sequence[int] | IndexArray) -> Objects:
         """The chosen ones."""
-        chosen = np.asarray(index, np.intp)
-        return Objects(*(column[chosen] for column in self.columns()))
+        at = np.asarray(index, np.intp)
+        return Objects(
+            self.range_m[at], self.bearing_rad[at], self.velocity_m_s[at], self.strength[at]
+        )
 
     def join(self, other: Objects) -> Objects:
         """These and the others."""
-        pairs = zip(self.columns(), other.columns(), strict=True)
-        return Objects(*(np.concatenate(pair) for pair in pairs))
+        return Objects(
+            np.concatenate([self.range_m, other.range_m]),
+            np.concatenate([self.bearing_rad, other.bearing_rad]),
+            np.concatenate([self.velocity_m_s, other.velocity_m_s]),
+            np.concatenate([self.strength, other.strength]),
+        )
 
     def with_strength(self, strength: ComplexArray) -> Objects:
         """The same places with other strengths."""
@@ -48,6 +50,4 @@ def no_objects() -> Objects:
 
 def one_object(range_m: float, bearing_rad: float, strength: complex) -> Objects:
     """A set of one object at rest."""
-    return Objects(
-        np.array([range_m]), np.array([bearing_rad]), np.zeros(1), np.array([strength])
-    )
+    return Objects(np.array([range_m]), np.array([bearing_rad]), np.zeros(1), np.array([strength]))

@@ -4,8 +4,6 @@ from __future__ import annotations
 
 import math
 
-import numpy as np
-
 from ..air import speed_of_sound
 from ..head import Head
 from ..types import Detection, DetectionFlag, Ears, FloatArray

@@ -192,9 +192,7 @@ class Scene:
             samples = [self.alone(members) for members in numbers]
             windows = [self.span(members) for members in numbers]
             starts = [self.objects.take(members) for members in numbers]
-            refined = refine(
-                self.model, excerpts(self.ping, samples, windows), starts, self.priors
-            )
+            refined = refine(self.model, excerpts(self.ping, samples, windows), starts, self.priors)
             for items, result in zip(group, refined, strict=True):
                 members = [self._number(item) for item in items]
                 self.replace(members, result, self.rivals(members))

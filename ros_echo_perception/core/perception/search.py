@@ -36,9 +36,11 @@ def matched_filter(model: HeadModel, ping: Conditioned, samples: ComplexArray) -
         windows = sliding_window_view(padded, size, axis=1)[:, :n]
         match = windows[0] @ template.conj()
         energy = windows[1].real @ np.abs(template) ** 2
-        full = float(np.sum(np.abs(template) ** 2)) * float(np.median(weight2[weight2 > 0])) if (
-            weight2 > 0
-        ).any() else 1.0
+        full = (
+            float(np.sum(np.abs(template) ** 2)) * float(np.median(weight2[weight2 > 0]))
+            if (weight2 > 0).any()
+            else 1.0
+        )
         # Where most of the pulse is masked, a match says nothing.
         good = energy > 1e-3 * full
         result[ear, good] = np.abs(match[good]) / np.sqrt(energy[good])
@@ -109,8 +111,8 @@ class Scan:
         phase = self.phase_rad
         turn = np.angle(np.exp(1j * np.diff(phase)))
         # The phase wraps at +-pi; a step that crosses 0 keeps its size when unwrapped.
-        crosses = (phase[:-1] == 0.0) | (phase[:-1] * (phase[:-1] + turn) < 0.0)
-        crosses &= np.abs(phase[:-1]) < math.pi / 2
+        ahead = phase >= 0.0  # a phase of exactly 0 belongs to one side, or it would count twice
+        crosses = (ahead[:-1] != ahead[1:]) & (np.abs(phase[:-1]) < math.pi / 2)
         at = np.nonzero(crosses & (turn != 0.0))[0]
         share = -phase[at] / turn[at]
         return np.asarray(

@@ -7,7 +7,7 @@ from functools import lru_cache
 
 import numpy as np
 
-from ..types import FloatArray
+from ..types import BoolArray, FloatArray
 from .conditioning import Conditioned
 from .mixture import fit_mixture_of_unknown_order
 from .model import HeadModel
@@ -30,9 +30,7 @@ def find_candidates(
     ----------
     matched : shape (2, n), from `search.matched_filter`.
     """
-    ears = tuple(
-        _ear_echoes(ping, matched[ear], model.pulses[ear]) for ear in range(2)
-    )
+    ears = tuple(_ear_echoes(ping, matched[ear], model.pulses[ear]) for ear in range(2))
     sigma_left, sigma_right = ping.noise_sigma
     both = ping.alive[0] and ping.alive[1]
     candidates = pair_ears(
@@ -60,7 +58,8 @@ def _ear_echoes(ping: Conditioned, matched: FloatArray, pulse: PulseTemplate) ->
     width_s = matched_width_s(pulse)
     guard = int(math.ceil(1.5 * width_s / ping.step_s))
     independent = pulse.noise_bandwidth_hz * ping.step_s
-    delays, heights = [], []
+    delays: list[float] = []
+    heights: list[float] = []
     for part in _stretches(matched > _OPEN_SIGMAS, guard):
         mixture = fit_mixture_of_unknown_order(
             ping.time_s[part],
@@ -72,12 +71,12 @@ def _ear_echoes(ping: Conditioned, matched: FloatArray, pulse: PulseTemplate) ->
         )
         height = mixture.heights() + _ENVELOPE_SIGMA
         keep = height > _OPEN_SIGMAS
-        delays.extend(mixture.time_s[keep])
-        heights.extend(height[keep])
+        delays.extend(mixture.time_s[keep].tolist())
+        heights.extend(height[keep].tolist())
     return EarEchoes(np.array(delays), np.array(heights))
 
 
-def _stretches(active: np.ndarray, guard: int) -> list[slice]:
+def _stretches(active: BoolArray, guard: int) -> list[slice]:
     """Runs of active samples, widened by the guard and merged where they touch."""
     index = np.nonzero(active)[0]
     if index.size == 0:

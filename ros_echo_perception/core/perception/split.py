@@ -71,9 +71,7 @@ def best_pairs(
     kept = np.argpartition(score.ravel(), -_KEPT)[-_KEPT:]
     kept = kept[np.argsort(score.ravel()[kept])[::-1]]
     pairs = [divmod(int(flat), len(places)) for flat in kept]
-    return [
-        _pair(places, i, j, match, overlap, norm) for i, j in _distinct(pairs, places, model)
-    ]
+    return [_pair(places, i, j, match, overlap, norm) for i, j in _distinct(pairs, places, model)]
 
 
 def _places(model: HeadModel, range_m: float, config: ProcessingConfig) -> Objects:
