@@ -1,10 +1,12 @@
 """The joint fit reaches the bound, and says how well it did."""
 
+import dataclasses
 import math
 
 import numpy as np
 import pytest
 from perception_helpers import (
+    HEAD,
     HEADS,
     SPEED,
     STILL,
@@ -16,7 +18,7 @@ from perception_helpers import (
     strength_for,
 )
 
-from ros_echo_perception.core.acoustics import echo_spectrum
+from ros_echo_perception.core.acoustics import burst_spectrum, echo_spectrum, resonance_response
 from ros_echo_perception.core.perception.joint import Priors, signals, window_of
 
 HEAD_NAMES = sorted(HEADS)
@@ -147,37 +149,65 @@ def test_cost_is_the_energy_that_is_left():
     assert abs(found.cost - n) < 4.0 * math.sqrt(n)
 
 
-def doppler_ping(model, velocity, burst_snr_db, rng=None):
-    """A pulse whose carrier is off by -2 v f0 / c, by formula: nothing of `signals`' speed."""
-    place = (1.0, 0.0)
-    true = objects((*place, strength_for(model, *place, burst_snr_db)))
+def ahead_model(burst):
+    """Ears that look straight ahead, where no beam colours the pulse."""
+    straight = {
+        side: dataclasses.replace(getattr(HEAD, side), yaw_rad=0.0) for side in ("left", "right")
+    }
+    model = head_model(dataclasses.replace(HEAD, **straight), burst)
+    model.burst = burst
+    return model
+
+
+def received(model, ear, shift_hz):
+    """Pulse of a burst whose frequencies all arrive shifted, from the spectra: the burst and the
+    transmitter's ringing move, the receiver's resonance and the filter do not. (times, pulse)"""
+    head, receiver = model.head, model.receiver
+    step, n = receiver.step_s / 32, 32 * 96
+    offset = np.fft.fftfreq(n, step)
+    band = np.abs(offset) < 1.5 / receiver.step_s
+    frequency, burst = head.carrier_hz + offset[band], model.burst
+    sent = burst_spectrum(frequency - shift_hz, head.carrier_hz, burst, head.drive_waveform)
+    sent = sent * resonance_response(head.transmitter, frequency - shift_hz)
+    spectrum = np.zeros(n, complex)
+    spectrum[band] = sent * resonance_response(head.receivers[ear], frequency)
+    spectrum[band] *= receiver.response(offset[band]) * np.exp(-2j * math.pi * offset[band] * 1e-3)
+    return step * np.arange(n) - 1e-3, np.fft.ifft(spectrum)
+
+
+def doppler_ping(model, velocity, energy_snr_db, rng=None):
+    """An object straight ahead whose sound arrives shifted by -2 v f0 / c."""
+    true = objects((1.0, 0.0, strength_for(model, 1.0, 0.0, energy_snr_db)))
     ping = baseband_ping(model, true)
     delay = model.geometry(true.range_m, true.bearing_rad).delay_s[:, 0]
-    lag = ping.time_s - delay[:, None] - model.pulses[0].peak_time_s
-    shift_hz = -2.0 * velocity * model.receiver.carrier_hz / SPEED
-    ping.samples[:] *= np.exp(2j * math.pi * shift_hz * lag)
+    for ear in (0, 1):
+        time_s, pulse = received(model, ear, -2.0 * velocity * 40e3 / SPEED)
+        lag = ping.time_s - delay[ear]
+        shape = np.interp(lag, time_s, pulse.real) + 1j * np.interp(lag, time_s, pulse.imag)
+        ping.samples[ear] *= 0.0
+        ping.samples[ear] += float(abs(true.strength[0])) * shape / np.abs(pulse).max()
     if rng is not None:
         ping.samples[:] += noise(rng, ping.samples.shape)
     return ping, true
 
 
 @pytest.mark.parametrize("velocity", [-0.8, 0.5, 1.0])
-@pytest.mark.parametrize("burst", [8.0, 16.0])
+@pytest.mark.parametrize("burst", [8.0, 16.0, 24.0])
 def test_a_receding_object_lowers_the_carrier(velocity, burst):
     # Closed formula for a moving reflector, to first order: shift = -2 v f0 / c.
-    model = head_model(burst=burst)
+    model = ahead_model(burst)
     loose = Priors(velocity_sigma_m_s=50.0, max_bearing_rad=1.22)
     ping, start = doppler_ping(model, velocity, 60.0)
     found = fit(model, ping, start, loose)
-    assert found.objects.velocity_m_s[0] == pytest.approx(velocity, abs=0.01)
-    assert found.objects.range_m[0] == pytest.approx(1.0, abs=2e-4)
+    assert found.objects.velocity_m_s[0] == pytest.approx(velocity, rel=0.05)
+    assert found.objects.range_m[0] == pytest.approx(1.0, abs=1e-3)
 
 
 def test_stated_velocity_sigma_is_the_scatter_and_falls_with_longer_bursts():
     loose = Priors(velocity_sigma_m_s=50.0, max_bearing_rad=1.22)
     stated = []
     for burst in (3.0, 32.0):
-        model = head_model(burst=burst)
+        model = ahead_model(burst)
         rng = np.random.default_rng(21)
         found = []
         for _ in range(60):
@@ -191,7 +221,7 @@ def test_stated_velocity_sigma_is_the_scatter_and_falls_with_longer_bursts():
 
 
 def test_prior_holds_the_velocity_where_the_ping_says_little():
-    model = head_model()
+    model = ahead_model(3.0)
     ping, start = doppler_ping(model, 0.0, 12.0, np.random.default_rng(2))
     found = fit(model, ping, start, Priors(velocity_sigma_m_s=0.3, max_bearing_rad=1.22))
     assert abs(found.objects.velocity_m_s[0]) < 0.9
