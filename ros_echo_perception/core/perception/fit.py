@@ -41,11 +41,12 @@ def gain_threshold(model: HeadModel, ping: Conditioned, false_detections_per_pin
     -----
     The gain is at most the summed energy of both ears' matched filters, of which noise exceeds
     x with probability (1 + x) exp(-x); it has as many independent tries as the record is long
-    in units of the pulse's noise bandwidth (twice, since maxima are searched).
+    in units of the pulse's noise bandwidth, five times over: maxima over delay and bearing are
+    searched, and the noise's level is itself an estimate (factor measured on simulated noise).
     """
     heard = ping.weight.max(axis=0) > 0
     duration_s = float(np.count_nonzero(heard)) * ping.step_s
-    tries = max(1.0, 2.0 * duration_s * model.pulses[0].noise_bandwidth_hz)
+    tries = max(1.0, 5.0 * duration_s * model.pulses[0].noise_bandwidth_hz)
     level = math.log(min(false_detections_per_ping / tries, 0.5))
     both = ping.alive[0] and ping.alive[1]
 

@@ -12,6 +12,7 @@ from ..types import EnvelopeFit, PingFlag, PingResult, RawEcho
 from .baseband import Baseband, receiver_filter, to_baseband
 from .conditioning import Conditioned, condition
 from .config import ProcessingConfig
+from .consistency import PingToPing
 from .fit import ObjectFitter
 from .model import HeadModel
 from .report import report_detections
@@ -27,14 +28,14 @@ _NOMINAL_MODEL_ERROR = 0.05
 class EchoPipeline:
     """Turns the raw echoes of one head into detections, ping by ping.
 
-    Examples
-    --------
-    See ``process``; the same object serves a node, a recording and a test.
+    Pings are judged one at a time, but for one thing: whether an echo that the ping before did
+    not show is to be believed (`PingToPing`). So pings come in the order of their emission.
     """
 
     def __init__(self, head: Head, config: ProcessingConfig | None = None) -> None:
         self.head = head
         self.config = config or ProcessingConfig()
+        self._ping_to_ping = PingToPing()
 
     def process(self, echo: RawEcho) -> PingResult:
         """All echoes of one ping.
@@ -50,11 +51,13 @@ class EchoPipeline:
         candidates = find_candidates(model, ping, matched, self.config.max_bearing_rad)
         fitter = ObjectFitter(model, ping, self.config)
         explained = fitter.fit(candidates)
-        detections = report_detections(explained, self.config, fitter.range_min_m)
+        found = report_detections(explained, self.config, fitter.range_min_m)
+        weighed = self._ping_to_ping.weigh(found, echo.emission_time_s)
+        likely = self.config.min_existence_probability
         return PingResult(
             emission_time_s=echo.emission_time_s,
             sequence=echo.sequence,
-            detections=detections,
+            detections=tuple(d for d in weighed if d.existence_probability >= likely),
             speed_of_sound_m_s=model.speed_m_s,
             range_min_m=fitter.range_min_m,
             range_max_m=self._range_max(model, echo),
@@ -66,6 +69,7 @@ class EchoPipeline:
 
     def reset(self) -> None:
         """Forget earlier pings (time jumped, recording looped)."""
+        self._ping_to_ping.reset()
 
     def _range_max(self, model: HeadModel, echo: RawEcho) -> float:
         # The echo's body must lie inside the record.

@@ -31,13 +31,8 @@ def report_detections(
     """Detections of one ping beyond the nearest measurable range, nearest first."""
     bearings = bearing_grid(explained.scene.model, config.max_bearing_rad)
     found = [_detection(explained, i, bearings, config) for i in range(len(explained.scene))]
-    wanted = [
-        d
-        for d in found
-        if d.existence_probability >= config.min_existence_probability
-        and nearest_m <= d.range_m <= config.max_range_m
-    ]
-    return flag_multipath(sorted(wanted, key=lambda d: d.range_m))
+    inside = [d for d in found if nearest_m <= d.range_m <= config.max_range_m]
+    return flag_multipath(sorted(inside, key=lambda d: d.range_m))
 
 
 def _detection(

@@ -127,7 +127,7 @@ class Scene:
         members = [
             j
             for j, item in enumerate(self.items)
-            if item.core.start < core.stop and item.core.stop > core.start
+            if j == i or (item.core.start < core.stop and item.core.stop > core.start)
         ]
         distance = np.abs(self.objects.range_m[members] - self.objects.range_m[i])
         nearest = np.argsort(distance, kind="stable")[:_MAX_CLUSTER]
