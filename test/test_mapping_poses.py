@@ -116,12 +116,12 @@ def test_growth_of_variance_over_a_span():
     buffer = PoseBuffer()
     for k in range(101):
         buffer.add(sample(0.1 * k, covariance=np.diag([0.01, 0.02, 0.03]) * (1 + k)))
-    assert buffer.variance_growth(10.0, 5.0) == pytest.approx((0.5, 1.0, 1.5))
-    assert buffer.variance_growth(10.0, 0.0) == (0.0, 0.0, 0.0)
-    assert filled(sample(0.0), sample(1.0)).variance_growth(1.0, 1.0) == (0.0, 0.0, 0.0)
+    assert buffer.relative_variance(10.0, 5.0) == pytest.approx((0.5, 1.0, 1.5))
+    assert buffer.relative_variance(10.0, 0.0) == (0.0, 0.0, 0.0)
+    assert filled(sample(0.0), sample(1.0)).relative_variance(1.0, 1.0) == (0.0, 0.0, 0.0)
 
 
 def test_broken_covariance_counts_as_unknown():
     broken = np.full((3, 3), np.nan)
     buffer = filled(sample(0.0), sample(0.1, covariance=broken))
-    assert buffer.variance_growth(0.1, 1.0) == (0.0, 0.0, 0.0)
+    assert buffer.relative_variance(0.1, 1.0) == (0.0, 0.0, 0.0)
