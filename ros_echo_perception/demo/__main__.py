@@ -19,6 +19,7 @@ from ..offline.resources import shipped
 from ..sources.simulator_config import SimulatorConfig
 
 _DRIVER, _SIMULATOR = DriverSettings(), SimulatorConfig()
+_CALIBRATED_UNIT = "sparrow_52_unit1.yaml"
 _OUR_FILES = ("map.png", "parameters.yaml", "summary.txt", "summary.json")
 _OUR_FOLDERS = ("bag", "log")
 
@@ -29,14 +30,14 @@ _OUR_FOLDERS = ("bag", "log")
               help="Folder for picture, bag, parameters and summary.")  # fmt: skip
 @click.option("--seconds", default=60.0, show_default=True, type=click.FloatRange(2.0, 3600.0),
               help="Length of the run; it ends earlier when the drive does.")  # fmt: skip
-@click.option("--head", default=_DRIVER.head_file, show_default=True,
-              help="Head file: a path, or one that ships with the package.")  # fmt: skip
+@click.option("--head", default="",
+              help="Simulate this head file, without tolerances, uncalibrated. Default: a unit of "
+              "sparrow_52.yaml and its own calibration.")  # fmt: skip
 @click.option("--world", default="config/worlds/demo_room.yaml", show_default=True,
               help="World with the robot's path: a path, or one that ships.")  # fmt: skip
 @click.option("--rate", "rate_hz", default=_SIMULATOR.ping_rate_hz, show_default=True,
               type=click.FloatRange(0.5, 27.0), help="Pings per second.")  # fmt: skip
-@click.option("--seed", default=_SIMULATOR.seed, show_default=True, help="Seed of the simulator.")
-def main(out: Path, seconds: float, head: str, world: str, rate_hz: float, seed: int) -> None:
+def main(out: Path, seconds: float, head: str, world: str, rate_hz: float) -> None:
     """A simulated robot drives through a room; driver, processing and mapping run over DDS.
 
     While it runs a table shows rate, detections, latency and map; at the end there are a summary
@@ -53,7 +54,7 @@ def main(out: Path, seconds: float, head: str, world: str, rate_hz: float, seed:
     signal.signal(signal.SIGHUP, _interrupt)
     _keep_to_ourselves()
     try:
-        _run(out, started_s, seconds, head, world, rate_hz, seed)
+        _run(out, started_s, seconds, head, world, rate_hz)
     except EchoPerceptionError as error:
         click.echo(f"error: {error}", err=True)
         sys.exit(2)
@@ -63,13 +64,14 @@ def main(out: Path, seconds: float, head: str, world: str, rate_hz: float, seed:
 
 
 def _run(
-    out: Path, started_s: float, seconds: float, head: str, world: str, rate_hz: float, seed: int
+    out: Path, started_s: float, seconds: float, head: str, world: str, rate_hz: float
 ) -> None:
     # ROS is loaded here, after the environment is set and after --help is answered.
     from . import session
 
     console = Console(highlight=False)
-    plan = session.Plan(seconds, out, head, world, rate_hz, seed)
+    calibrated = "" if head else _CALIBRATED_UNIT
+    plan = session.Plan(seconds, out, head or _DRIVER.head_file, calibrated, world, rate_hz)
     console.print(
         f"Demo: SIMULATED echoes of {plan.world_path().name}, {seconds:g} s, ROS_DOMAIN_ID "
         f"{os.environ['ROS_DOMAIN_ID']}.\nNot a protective device: nobody's safety may depend "

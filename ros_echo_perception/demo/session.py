@@ -28,16 +28,23 @@ NODES = ("processing", "mapping", "driver")
 _START_TIMEOUT_S = 30.0
 _SILENCE_S = 3.0
 _POLL_S = 0.25
+_WINDOW_M = 16.0  # the whole room stays in the picture
 _LAST_MAP_S = 1.2  # two publishing periods of the mapping node
 
 
 @dataclass(frozen=True)
 class Plan:
-    """What to run: all of it is told to the nodes as parameters."""
+    """What to run: all of it is told to the nodes as parameters.
+
+    ``head`` is the maker's file of the simulated head. With ``calibrated`` the driver simulates a
+    manufactured unit of it, which differs from its data sheet, and processing works with that
+    file, which `calibrate` made for this unit. Without, the unit is as on its data sheet.
+    """
 
     seconds: float
     out: Path
     head: str = DriverSettings().head_file
+    calibrated: str = ""
     world: str = "config/worlds/demo_room.yaml"
     rate_hz: float = SimulatorConfig().ping_rate_hz
     seed: int = SimulatorConfig().seed
@@ -49,8 +56,11 @@ class Plan:
     def arguments(self, node: str) -> list[str]:
         """Command line of a node."""
         given: dict[str, object] = {"head_file": self.head} if node != "mapping" else {}
+        if node == "processing" and self.calibrated:
+            given["head_file"] = self.calibrated
         if node == "driver":
             given |= {
+                "simulator.unit_error_scale": 1.0 if self.calibrated else 0.0,
                 "source": "simulator",
                 "world_file": str(self.world_path()),
                 "simulator.ping_rate_hz": self.rate_hz,
@@ -61,7 +71,7 @@ class Plan:
             mount = SimulatorConfig().mount
             given = {
                 "mount_x_m": [mount.x_m], "mount_y_m": [mount.y_m],
-                "mount_yaw_rad": [mount.yaw_rad],
+                "mount_yaw_rad": [mount.yaw_rad], "width_m": _WINDOW_M, "height_m": _WINDOW_M,
             }  # fmt: skip
         words = ["--ros-args"]
         config = shipped("config") / f"{node}.yaml"

@@ -78,7 +78,7 @@ def save_map_picture(picture: MapPicture, path: Path, dpi: int = 130) -> None:
     if picture.detections is not None and len(picture.detections):
         axes.plot(
             picture.detections[:, 0], picture.detections[:, 1],
-            ".", color=DETECTION, markersize=2.5, alpha=0.55, zorder=4, markeredgewidth=0,
+            ".", color=DETECTION, markersize=4.5, alpha=0.8, zorder=2, markeredgewidth=0,
         )  # fmt: skip
     _draw_path(axes, picture.path)
     axes.set_xlim(x_low, x_high)
