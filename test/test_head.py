@@ -15,7 +15,8 @@ from ros_echo_perception.core.head import (
     save_head,
 )
 
-HEADS = sorted((ROOT / "config" / "heads").glob("*.yaml"))
+HEADS = [ROOT / "config" / "heads" / f"{name}.yaml" for name in ("heron_180", "sparrow_52")]
+UNIT = ROOT / "config" / "heads" / "sparrow_52_unit1.yaml"
 
 
 @pytest.mark.parametrize("path", HEADS, ids=lambda path: path.stem)
@@ -36,6 +37,13 @@ def test_shipped_heads(path):
 def test_shipped_heads_have_different_baselines():
     baselines = sorted(load_head(path).baseline_m for path in HEADS)
     assert baselines == pytest.approx([0.052, 0.180])
+
+
+def test_calibrated_sample_is_a_unit_of_its_head():
+    unit, nominal = load_head(UNIT), load_head(HEADS[1])
+    assert unit.calibrated and unit.name == nominal.name
+    assert 5e-6 < unit.latency_s < 60e-6
+    assert abs(unit.baseline_m - nominal.baseline_m) < 2e-3
 
 
 def test_save_and_load(tmp_path):

@@ -185,5 +185,7 @@ def test_odometry_drifts_within_reason_and_is_seeded():
     assert drifting_odometry(path, 3) != drifting_odometry(path, 4)
     times = [s.time_s for s in drifting_odometry(path, 0)]
     np.testing.assert_allclose(np.diff(times), 0.02, atol=1e-9)
-    covariances = [s.covariance[0, 0] for s in drifting_odometry(path, 0)[::200]]
-    assert np.all(np.diff(covariances) >= 0.0)
+    heading = [s.covariance[2, 2] for s in drifting_odometry(path, 0)[::200]]
+    assert np.all(np.diff(heading) >= 0.0)
+    place = [np.trace(s.covariance[:2, :2]) for s in drifting_odometry(path, 0)[::200]]
+    assert place[0] < place[len(place) // 2] < place[-1] < (0.1 * way_m) ** 2
