@@ -4,6 +4,7 @@ import ast
 import re
 import shlex
 from pathlib import Path
+from xml.etree import ElementTree
 
 import pytest
 import yaml
@@ -183,6 +184,18 @@ def test_packages_of_a_fresh_machine_are_those_that_dev_asks_for():
     told = set(re.search(r"sudo apt install (.*)", README).group(1).split())
     asked = re.findall(r"missing\+=\(\"?([\w$-]+)\"?\)", (ROOT / "dev").read_text())
     assert told - {"python3"} == {name.replace("python$version", "python3") for name in asked}
+
+
+def test_every_dependency_has_its_reason():
+    """Names as in Python, keys as in package.xml (rosdep)."""
+    chapter = DEVELOPERS.partition("## Dependencies")[2].partition("\n## ")[0]
+    told = {name for row in rows_of(chapter) for name in re.split(r", ", row[0].lower())}
+    other_names = {"yaml": "pyyaml", "sklearn": "scikit-learn"}
+    manifest = ElementTree.parse(ROOT / "package.xml").getroot()
+    keys = {e.text for e in manifest if e.tag.endswith("depend")}
+    asked = {re.sub(r"^python3-|-pip$", "", key) for key in keys}
+    assert len(asked) > 20
+    assert {other_names.get(name, name) for name in asked} <= told
 
 
 # ------------------------------------------------------------------ what the text names
