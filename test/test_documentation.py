@@ -264,9 +264,13 @@ def test_messages_in_the_troubleshooting_table_are_what_the_code_says():
             assert part in sources or part in flags, text
 
 
-def test_results_can_be_put_in():
+def test_results_are_those_of_the_command():
+    """One block, with all tables that `score` writes and a time per ping."""
     assert README.count(BEGIN) == README.count(END) == 1
-    assert README.index(BEGIN) < README.index(END)
+    block = README.partition(BEGIN)[2].partition(END)[0]
+    first_cells = {row[0] for row in rows_of(block)}
+    assert {"scenes", "**all**", "two objects", "drive"} <= first_cells
+    assert "time per ping" in block
 
 
 def test_pictures_are_small_png_files():
