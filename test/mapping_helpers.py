@@ -2,6 +2,8 @@
 
 import math
 
+import numpy as np
+
 from ros_echo_perception.core.mapping import LocalMapper, MappingConfig
 from ros_echo_perception.core.types import (
     Detection,
@@ -90,6 +92,14 @@ def highest(snapshot, x_m, y_m, radius_m=0.1):
     """Highest value among the cells around a place."""
     steps = [-radius_m, -radius_m / 2, 0.0, radius_m / 2, radius_m]
     return max(value(snapshot, x_m + dx, y_m + dy) for dx in steps for dy in steps)
+
+
+def farthest(snapshot, x_m, y_m):
+    """Distance of the occupied cell that is farthest from a place."""
+    rows, columns = np.nonzero(snapshot.data >= 65)
+    x = snapshot.origin_x_m + (columns + 0.5) * snapshot.resolution_m
+    y = snapshot.origin_y_m + (rows + 0.5) * snapshot.resolution_m
+    return float(np.hypot(x - x_m, y - y_m).max())
 
 
 def seen_from(pose, points, sigma_rad=0.01):

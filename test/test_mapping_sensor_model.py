@@ -98,10 +98,11 @@ def test_what_alternatives_leave_is_for_the_bearing_itself():
 
 
 def test_expected_outliers_take_their_share_and_lie_widely():
-    config = replace(CONFIG, bearing_outlier_weight=0.3, bearing_outlier_sigma_rad=0.25)
+    config = replace(CONFIG, bearing_outlier_weight=0.3)
     hypotheses = possible(detection(2.0, 0.1, existence_probability=1.0), config=config)
     assert hypotheses.weight.tolist() == pytest.approx([0.7, 0.3])
-    assert hypotheses.spread_rad.tolist() == pytest.approx([0.01, 0.25])
+    assert hypotheses.uniform.tolist() == [False, True]
+    assert hypotheses.spread_rad.tolist() == pytest.approx([0.01, 0.3])
 
 
 def test_one_sided_echo_fills_its_interval_evenly_and_thinly():

@@ -4,6 +4,7 @@ from .config import MappingConfig
 from .grid import MapSnapshot
 from .map_file import save_map_image, save_map_npz
 from .pipeline import LocalMapper, MapOutcome, run_mapper
+from .plain_arcs import plain_arcs_map
 from .poses import PoseBuffer
 
 __all__ = [
@@ -12,6 +13,7 @@ __all__ = [
     "MapSnapshot",
     "MappingConfig",
     "PoseBuffer",
+    "plain_arcs_map",
     "run_mapper",
     "save_map_image",
     "save_map_npz",

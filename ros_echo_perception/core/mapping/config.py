@@ -26,7 +26,7 @@ class MappingConfig(Settings):
         0.5, "Echoes less likely than this are not used", "", 0.0, 1.0
     )
     hit_gain: float = setting(
-        1.5,
+        1.1,
         "Likelihood ratio gained by a cell that alone can explain an echo; cells that share it "
         "gain in proportion",
         "",
@@ -50,7 +50,7 @@ class MappingConfig(Settings):
         0.61,
     )
     free_log_odds: float = setting(
-        0.12, "One ping lowers a cell that the sound crossed by at most this", "", 0.0, 0.61
+        0.08, "One ping lowers a cell that the sound crossed by at most this", "", 0.0, 0.61
     )
     free_half_width_m: float = setting(
         0.05, "An echo clears its path to this distance on either side", "m", 0.0, 0.5
@@ -94,8 +94,19 @@ class MappingConfig(Settings):
         0.0,
         0.9,
     )
-    bearing_outlier_sigma_rad: float = setting(
-        0.2, "How wrong such bearings are (1 sigma)", "rad", 0.01, 1.5
+    one_sided_outlier_weight: float = setting(
+        0.5, "The same for echoes heard by one ear that list possible bearings", "", 0.0, 1.0
+    )
+    max_alternatives: int = setting(
+        8, "Of each echo's possible bearings the most likely up to this number are used", "", 1, 32
+    )
+    motion_span_s: float = setting(
+        4.0,
+        "The robot's way since pings up to this old weighs the possible bearings of an echo; "
+        "0: it does not",
+        "s",
+        0.0,
+        60.0,
     )
     confirm_distance_m: float = setting(
         0.15, "Two places of the head count as different from this distance", "m", 0.01, 2.0
@@ -113,10 +124,10 @@ class MappingConfig(Settings):
         1.0, "Silence clears the beam up to this range, where the policy says so", "m", 0.05, 10.0
     )
     occupied_decay_s: float = setting(
-        120.0, "Time constant with which occupied cells fade; 0: they do not", "s", 0.0, 1e6
+        60.0, "Time constant with which occupied cells fade; 0: they do not", "s", 0.0, 1e6
     )
     free_decay_s: float = setting(
-        60.0, "Time constant with which free cells fade; 0: they do not", "s", 0.0, 1e6
+        30.0, "Time constant with which free cells fade; 0: they do not", "s", 0.0, 1e6
     )
     max_pose_gap_s: float = setting(
         0.2, "Poses are interpolated over gaps of the odometry up to this long", "s", 0.001, 10.0

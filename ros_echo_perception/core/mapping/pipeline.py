@@ -23,6 +23,7 @@ from .evidence import (
 )
 from .grid import MapSnapshot, RollingGrid
 from .hypotheses import hypotheses_of, is_valid
+from .motion import Looks
 from .pending import PendingPings, WaitingPing
 from .poses import PoseBuffer, PoseOutcome, has_broken_covariance
 from .sensor_model import clear_view, share
@@ -91,6 +92,7 @@ class LocalMapper:
             config.max_turn_rad_s,
             config.time_restart_s,
         )
+        self._looks = {head_id: Looks() for head_id in mounts}
         self._pending = PendingPings(config.max_pending_pings)
         self._revision = 0
         self._map_time_s = math.nan
@@ -103,6 +105,8 @@ class LocalMapper:
         self.counts["covariance_invalid"] += has_broken_covariance(sample)
         if outcome in (PoseOutcome.RESTARTED, PoseOutcome.JUMPED):
             self.clear()
+            for looks in self._looks.values():
+                looks.clear()
         if outcome is PoseOutcome.RESTARTED:
             limit_s = sample.time_s + self.config.time_restart_s
             dropped = self._pending.drop_later_than(limit_s)
@@ -179,7 +183,10 @@ class LocalMapper:
         except OdometryGapError:
             return MapOutcome.SKIPPED_NO_ODOMETRY
         moved = self.grid.centre_on(robot.x_m, robot.y_m)
-        possible = hypotheses_of(detections, heads, self._pose_variance(time_s), config)
+        looks = self._looks[ping.head_id]
+        asked = looks.asked(time_s, emission, config.motion_span_s)
+        looks.add(time_s, emission, np.array([d.range_m for d in detections]))
+        possible = hypotheses_of(detections, heads, self._pose_variance(time_s), config, asked)
         paths, path_cells = free_paths(possible, self.grid, result.range_min_m, config)
         clear = clear_view(possible, paths, self._updater.read(path_cells, time_s))
         arcs, arc_cells = arcs_of(possible, self.grid, config)

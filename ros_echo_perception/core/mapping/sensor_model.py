@@ -40,7 +40,7 @@ from .hypotheses import Hypotheses
 
 _SPAN_SIGMAS = 2.5
 _GOLDEN_SECTION = 0.618034
-_MAX_SAMPLES = 12_000
+_MAX_SAMPLES = 8_000
 _MIN_RANGE_SAMPLES, _MIN_BEARING_SAMPLES = 5, 11
 _MIN_RANGE_SIGMA_CELLS = 0.25
 _MARGIN_CELLS = 1.5
@@ -183,7 +183,7 @@ def silent_samples(
 def _count(length_m: FloatArray, pitch_m: float, at_least: int) -> IntArray:
     """Points on a stretch so that they lie no further apart than the pitch."""
     n = np.ceil(np.minimum(length_m / pitch_m, 1e6)).astype(np.int64) + 1
-    return np.maximum(n, at_least)
+    return np.asarray(np.maximum(n, at_least))
 
 
 def _within_budget(n_range: IntArray, n_bearing: IntArray) -> tuple[IntArray, IntArray]:
