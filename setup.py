@@ -32,6 +32,7 @@ setup(
     install_requires=[
         "click>=8.1",
         "matplotlib>=3.6",
+        "numba>=0.58",
         "numpy>=1.26",
         "PyYAML>=6.0",
         "rich>=13.7",

@@ -15,7 +15,7 @@ ROS = {
     "sensor_msgs", "std_msgs", "geometry_msgs", "nav_msgs", "visualization_msgs", "tf2_ros",
     "diagnostic_msgs", "builtin_interfaces", "std_srvs", "rosbag2_py", "rosbags",
 }  # fmt: skip
-CORE_ALLOWED = {"numpy", "scipy", "yaml"}
+CORE_ALLOWED = {"numpy", "numba", "scipy", "yaml"}
 
 
 def short(path):
@@ -49,7 +49,7 @@ def test_core_and_sources_import_neither_ros_nor_messages(path):
 
 
 @pytest.mark.parametrize("path", files("core"), ids=short)
-def test_core_imports_only_itself_and_three_libraries(path):
+def test_core_imports_only_itself_and_four_libraries(path):
     for name in imports(path):
         top, *rest = name.split(".")
         if top == "ros_echo_perception":

@@ -23,6 +23,7 @@ EXECUTABLES = dict(
 ROSDEP_KEYS = {
     "click": "python3-click",
     "matplotlib": "python3-matplotlib",
+    "numba": "python3-numba",
     "numpy": "python3-numpy",
     "rich": "python3-rich",
     "rosbags": "python3-rosbags-pip",

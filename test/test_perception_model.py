@@ -9,6 +9,7 @@ from perception_helpers import HEADS, SPEED, head_model, mirrored_head, objects,
 from ros_echo_perception.core.acoustics import pulse_metrics
 from ros_echo_perception.core.perception.baseband import receiver_filter, to_baseband
 from ros_echo_perception.core.perception.joint import signals
+from ros_echo_perception.core.perception.model import HeadModel
 
 HEAD_NAMES = sorted(HEADS)
 BURSTS = [3.0, 8.0, 16.0, 24.0]
@@ -149,9 +150,9 @@ def test_model_renders_what_the_simulator_sends(name):
     echoes, source = simulated(
         [(1.2, 0.25)], head, noise_rms=1e-7, adc_bits=16, crosstalk_level=0.0, source_level=3.0,
     )  # fmt: skip
-    model = head_model(head)
-    model.speed_m_s = source.speed_of_sound_m_s
-    baseband = to_baseband(echoes[0], receiver_filter(head, head.sample_rate_hz, head.carrier_hz))
+    receiver = receiver_filter(head, head.sample_rate_hz, head.carrier_hz)
+    model = HeadModel(head, source.speed_of_sound_m_s, 3.0, receiver)
+    baseband = to_baseband(echoes[0], receiver)
     value = signals(model, objects((1.2, 0.25, 1.0)), baseband.time_s).value[:, 0, :]
     strength = np.vdot(value, baseband.samples) / np.vdot(value, value)
     left = baseband.samples - strength * value

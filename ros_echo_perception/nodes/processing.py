@@ -10,7 +10,7 @@ from rclpy.node import Node
 from ..core.errors import EchoPerceptionError, InvalidEchoError, refuse
 from ..core.head import load_head
 from ..core.perception.config import ProcessingConfig
-from ..core.perception.pipeline import EchoPipeline
+from ..core.perception.pipeline import EchoPipeline, warm_up
 from ..core.perception.scan import ScanConfig, scan_from_result
 from ..core.types import PingFlag, PingResult, RawEcho
 from . import conversion, topics, views
@@ -46,9 +46,12 @@ class ProcessingNode(Node):
         ]
         self._envelope = create_publisher(self, topics.ENVELOPE)
         self._reporter = Reporter(self, self.settings.diagnostics_period_s, self._status)
+        ready_s = warm_up(self.head, self.pipeline.config)
         create_subscription(self, topics.RAW_ECHO, self._on_raw_echo)
         kind = "calibrated" if self.head.calibrated else "nominal"
-        self.get_logger().info(f"head {self.head.name} ({kind} values)")
+        self.get_logger().info(
+            f"head {self.head.name} ({kind} values), warmed up in {ready_s:.1f} s"
+        )
 
     def _on_change(self) -> None:
         config = self.parameters.get(ProcessingConfig)

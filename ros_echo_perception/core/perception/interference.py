@@ -15,6 +15,7 @@ import numpy as np
 from ..acoustics import resonance_response
 from ..head import Head, Transducer
 from ..types import ComplexArray, FloatArray
+from . import kernels_ear
 from .baseband import ReceiverFilter
 from .conditioning import Conditioned
 
@@ -91,14 +92,8 @@ def _best_delay(
     samples: ComplexArray,
 ) -> tuple[float, ComplexArray]:
     fine = receiver.step_s / 16
-    index = np.rint((time[None, :] - delays[:, None] + _LEAD_S) / fine).astype(np.intp)
-    inside = (index >= 0) & (index < shape.size)
-    rows = np.where(inside, shape[np.clip(index, 0, shape.size - 1)], 0.0)
-    energy = np.abs(rows) ** 2 @ weight**2
-    match = rows.conj() @ (samples * weight**2)
-    gain = np.abs(match) ** 2 / np.maximum(energy, 1e-30)
-    best = int(np.argmax(gain))
-    return float(gain[best]), match[best] / max(float(energy[best]), 1e-30) * rows[best]
+    position, shift = (time + _LEAD_S) / fine, delays / fine
+    return kernels_ear.best_delay(shape, position, shift, weight, samples)
 
 
 @lru_cache(maxsize=16)

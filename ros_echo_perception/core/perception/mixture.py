@@ -19,6 +19,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..types import FloatArray
+from . import kernels_ear
 
 _TOLERANCE = 1e-4
 _MAX_ROUNDS = 300
@@ -86,33 +87,11 @@ def fit_mixture(
     >>> m.time_s.round(1).tolist(), round(m.sigma_s, 1), m.heights().round(2).tolist()
     ([20.0, 38.0], 4.0, [1.0, 0.5])
     """
-    low, high = sigma_bounds_s
-    share = weight / weight.sum()
-    mean = np.array(start_time_s, float)
-    fraction = np.full(mean.size, 1.0 / mean.size)
-    sigma = math.sqrt(low * high)
-    # A thin uniform background keeps far-off bins from pulling the components.
-    background = _BACKGROUND / (time_s[-1] - time_s[0] + time_s[1] - time_s[0])
-    previous = -math.inf
-    for _ in range(_MAX_ROUNDS):
-        z = (time_s[:, None] - mean) / sigma
-        density = np.exp(-0.5 * z * z) * (fraction / (sigma * math.sqrt(2.0 * math.pi)))
-        total = density.sum(axis=1) + background
-        likelihood = float(share @ np.log(total))
-        duty = density * (share / total)[:, None]
-        mass = duty.sum(axis=0)
-        alive = mass > 1e-4
-        if not alive.all():
-            mean, fraction = mean[alive], fraction[alive] / fraction[alive].sum()
-            previous = -math.inf
-            continue
-        fraction = mass / mass.sum()
-        mean = (duty * time_s[:, None]).sum(axis=0) / mass
-        spread = (duty * (time_s[:, None] - mean) ** 2).sum() / mass.sum()
-        sigma = min(max(math.sqrt(spread), low), high)
-        if likelihood - previous < _TOLERANCE:
-            break
-        previous = likelihood
+    time_s, weight, start = (np.array(p, float) for p in (time_s, weight, start_time_s))
+    low, high = (float(bound) for bound in sigma_bounds_s)
+    mean, fraction, sigma, likelihood = kernels_ear.mixture(
+        time_s, weight, start, (low, high), _BACKGROUND, _MAX_ROUNDS, _TOLERANCE
+    )
     order = np.argsort(mean)
     bin_width = time_s[1] - time_s[0]
     area = fraction[order] * float(weight.sum()) * bin_width

@@ -16,10 +16,13 @@ import numpy as np
 from ..acoustics import directivity
 from ..head import Head, Transducer
 from ..types import ComplexArray, FloatArray
+from . import kernels, kernels_delay
 from .baseband import ReceiverFilter
+from .compiled import HeadArrays
 from .pulse import PulseTemplate, pulse_pair, pulse_templates
 
-_TABLE_STEP_RAD = 2e-3
+_TABLE_SIZE = 3143  # of the beams, two more than go round
+_TABLE_STEP_RAD = 2.0 * math.pi / (_TABLE_SIZE - 2)
 
 
 @dataclass(frozen=True)
@@ -42,28 +45,41 @@ class HeadModel:
         self, head: Head, speed_m_s: float, burst_cycles: float, receiver: ReceiverFilter
     ) -> None:
         self.head = head
-        self.speed_m_s = speed_m_s
         self.receiver = receiver
         self.pulses: tuple[PulseTemplate, PulseTemplate] = pulse_templates(
             head, burst_cycles, receiver
         )
         self.pulse_pair = pulse_pair(self.pulses)
         transducers = (head.transmitter, *head.receivers)
-        self._beams = _beam_tables(transducers)
-        half_db = head.gain_mismatch_db / 2.0
-        self._ear_gain = 10.0 ** (np.array([half_db, -half_db]) / 20.0)
-        self._ear_phase = np.array([0.5, -0.5]) * head.phase_mismatch_rad
-        places = np.array([t.position_m for t in transducers])
-        self._places = (places[:, 0], places[:, 1], places[:, 2] ** 2)
         self.omega = 2.0 * math.pi * receiver.carrier_hz
         # An object that recedes at v lowers the carrier by 2 v / c of itself.
         self.doppler_rad_s_per_m_s = -2.0 * self.omega / speed_m_s
+        half_db, half_rad = head.gain_mismatch_db / 2.0, head.phase_mismatch_rad / 2.0
+        self.arrays = HeadArrays(
+            places=np.array([t.position_m for t in transducers], float),
+            beams=_beam_tables(transducers),
+            beam_step_rad=_TABLE_STEP_RAD,
+            ear_gain=10.0 ** (np.array([half_db, -half_db]) / 20.0),
+            ear_phase=np.array([half_rad, -half_rad]),
+            pulse=self.pulse_pair.table,
+            start_s=self.pulse_pair.start_s,
+            fine_step_s=self.pulse_pair.fine_step_s,
+            latency_s=float(head.latency_s),
+            speed_m_s=float(speed_m_s),
+            carrier_hz=float(head.carrier_hz),
+            omega=float(self.omega),
+            doppler=float(self.doppler_rad_s_per_m_s),
+        )
+
+    @property
+    def speed_m_s(self) -> float:
+        """Speed of sound; for another one make another model."""
+        return self.arrays.speed_m_s
 
     def delays(self, range_m: FloatArray, bearing_rad: FloatArray) -> FloatArray:
         """Delays of both ears since the emission, shape (2, ...) for places of shape (...)."""
-        dx, dy = self._offsets(range_m, np.cos(bearing_rad), np.sin(bearing_rad))
-        distance = np.sqrt(dx * dx + dy * dy + self._column(2, dx.ndim))
-        return np.asarray(self.head.latency_s + (distance[0] + distance[1:]) / self.speed_m_s)
+        shape = np.shape(range_m)
+        return kernels_delay.delays(self.arrays, *_flat(range_m, bearing_rad)).reshape(2, *shape)
 
     def geometry(self, range_m: FloatArray, bearing_rad: FloatArray) -> EarGeometry:
         """Delays since the emission and gains of both ears, with derivatives.
@@ -72,34 +88,8 @@ class HeadModel:
         ----------
         range_m, bearing_rad : equal shapes.
         """
-        cos, sin = np.cos(bearing_rad), np.sin(bearing_rad)
-        dx, dy = self._offsets(range_m, cos, sin)
-        distance = np.sqrt(dx * dx + dy * dy + self._column(2, dx.ndim))
-        unit = 1.0 / (distance * self.speed_m_s)
-        along = (dx * cos + dy * sin) * unit
-        across = (dy * cos - dx * sin) * (range_m * unit)
-        travel = distance / self.speed_m_s
-        beam, beam_slope, tilt = self._beams.lookup(np.arctan2(dy, dx))
-        transmit = self._ear_gain.reshape(2, *(1,) * (dx.ndim - 1)) * beam[0]
-        gain = transmit * beam[1:]
-        return EarGeometry(
-            delay_s=self.head.latency_s + (travel[0] + travel[1:]),
-            delay_per_m=along[0] + along[1:],
-            delay_per_rad=across[0] + across[1:],
-            gain=gain,
-            gain_per_rad=transmit * beam_slope[1:] + gain * (beam_slope[0] / (beam[0] + 1e-12)),
-            tilt_s=(tilt[0] + tilt[1:]) * (1.0 / self.head.carrier_hz),
-        )
-
-    def _offsets(
-        self, range_m: FloatArray, cos: FloatArray, sin: FloatArray
-    ) -> tuple[FloatArray, FloatArray]:
-        """From each transducer to the places, x and y, shape (3, ...)."""
-        ndim = np.ndim(range_m) + 1
-        return range_m * cos - self._column(0, ndim), range_m * sin - self._column(1, ndim)
-
-    def _column(self, number: int, ndim: int) -> FloatArray:
-        return self._places[number].reshape(3, *(1,) * (ndim - 1))
+        rows = kernels.geometry(self.arrays, *_flat(range_m, bearing_rad))
+        return EarGeometry(*rows.reshape(6, 2, *np.shape(range_m)))
 
     def carrier(self, geometry: EarGeometry) -> ComplexArray:
         """Phase factors of both ears, exp(-j w (delay - mean delay)) with their mismatch.
@@ -107,7 +97,7 @@ class HeadModel:
         The common phase belongs to the object's strength: so a small step in range is not
         confounded with many turns of the carrier.
         """
-        mismatch = self._ear_phase.reshape(2, *(1,) * (geometry.delay_s.ndim - 1))
+        mismatch = self.arrays.ear_phase.reshape(2, *(1,) * (geometry.delay_s.ndim - 1))
         delay = geometry.delay_s
         relative = delay - 0.5 * (delay[0] + delay[1])
         return np.asarray(np.exp(1j * (mismatch - self.omega * relative)))
@@ -126,31 +116,15 @@ class HeadModel:
         return max(r + (delay_s - float(geometry.delay_s.mean())) / slope, 1e-3)
 
 
-class _BeamTables:
-    """Directivities of all three transducers over all directions, looked up linearly."""
+def _flat(range_m: FloatArray, bearing_rad: FloatArray) -> tuple[FloatArray, FloatArray]:
+    return np.array(range_m, float).ravel(), np.array(bearing_rad, float).ravel()
 
-    def __init__(self, transducers: tuple[Transducer, ...]) -> None:
-        size = int(2 * math.pi / _TABLE_STEP_RAD) + 2
-        self._step = 2 * math.pi / (size - 2)
-        self._size = size
-        angle = -math.pi + np.arange(size) * self._step
-        rows = [_beam_rows(t, angle, self._step) for t in transducers]
-        # (3 quantities, 3 transducers * size)
-        self._table = np.concatenate(rows, axis=1)
-        self._offset = np.arange(len(transducers)) * size
 
-    def lookup(self, angle_rad: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
-        """Gain, its slope by angle, and its relative slope by relative frequency.
-
-        ``angle_rad`` has shape (3, ...): one row for each transducer.
-        """
-        position = (angle_rad + math.pi) / self._step
-        index = np.minimum(position.astype(np.intp), self._size - 2)
-        fraction = position - index
-        index += self._offset.reshape(-1, *(1,) * (angle_rad.ndim - 1))
-        low = self._table[:, index]
-        value, slope, tilt = low + fraction * (self._table[:, index + 1] - low)
-        return value, slope, tilt
+@lru_cache(maxsize=32)
+def _beam_tables(transducers: tuple[Transducer, ...]) -> FloatArray:
+    """Directivities over all directions from -pi on; see `HeadArrays.beams`."""
+    angle = -math.pi + np.arange(_TABLE_SIZE) * _TABLE_STEP_RAD
+    return np.stack([_beam_rows(t, angle, _TABLE_STEP_RAD) for t in transducers])
 
 
 def _beam_rows(transducer: Transducer, angle: FloatArray, step: float) -> FloatArray:
@@ -161,9 +135,4 @@ def _beam_rows(transducer: Transducer, angle: FloatArray, step: float) -> FloatA
     off_axis = angle - transducer.yaw_rad
     front = (np.cos(off_axis) > 0.1) & (value > 0.02)
     tilt = np.where(front, np.tan(off_axis) * slope / np.where(front, value, 1.0), 0.0)
-    return np.stack([value, slope, np.clip(tilt, -6.0, 6.0)])
-
-
-@lru_cache(maxsize=32)
-def _beam_tables(transducers: tuple[Transducer, ...]) -> _BeamTables:
-    return _BeamTables(transducers)
+    return np.stack([value, slope, np.clip(tilt, -6.0, 6.0)], axis=1)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import time
 
 import numpy as np
 
@@ -133,3 +134,38 @@ def _envelope(baseband: Baseband, ping: Conditioned, explained: Explained) -> En
         threshold=(sigma[0] * factor, sigma[1] * factor),
         blanking_end_s=ping.blanking_end_s,
     )
+
+
+def warm_up(head: Head, config: ProcessingConfig | None = None) -> float:
+    """Run one synthetic ping through the chain, so that the first real one need not wait.
+
+    The inner loops are compiled when they first run (once on a machine: the code is kept) and
+    loaded when they first run in a process.
+
+    Parameters
+    ----------
+    head, config : of the pipeline that is about to start.
+
+    Returns
+    -------
+    Seconds that it took.
+    """
+    start_s = time.perf_counter()
+    rate_hz = head.sample_rate_hz
+    n = int(0.03 * rate_hz)
+    time_s = np.arange(n) / rate_hz
+    wave = 20.0 * np.random.default_rng(0).standard_normal((2, n))
+    # Bursts that are no echoes, close and strong, so that every kind of look is taken.
+    for delay_s in (0.010, 0.0102, 0.0104, 0.018):
+        hump = np.exp(-0.5 * ((time_s - delay_s) / 1.5e-4) ** 2)
+        wave += 4e3 * hump * np.cos(2.0 * math.pi * head.carrier_hz * (time_s - delay_s))
+    EchoPipeline(head, config).process(
+        RawEcho(
+            samples=np.rint(wave).astype(np.int16),
+            sample_rate_hz=rate_hz,
+            carrier_hz=head.carrier_hz,
+            burst_cycles=3.0,
+            emission_time_s=0.0,
+        )
+    )
+    return time.perf_counter() - start_s

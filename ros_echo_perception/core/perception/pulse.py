@@ -76,45 +76,30 @@ class PulseTemplate:
 
 
 class PulsePair:
-    """The templates of both ears on one time axis, looked up together."""
+    """The templates of both ears on one time axis, looked up together by the kernels.
+
+    Attributes
+    ----------
+    table
+        shape (2, n, 4), left ear first, every ``fine_step_s`` from ``start_s`` on: value and its
+        slope, turning time (see `PulseTemplate`) and its slope. Value and slope end with 0.
+    """
 
     def __init__(self, pulses: tuple[PulseTemplate, PulseTemplate]) -> None:
         self.start_s = min(p.start_s for p in pulses)
         self.end_s = max(p.end_s for p in pulses)
         self.core_start_s, self.core_end_s = _core(pulses)
-        self._fine_step_s = pulses[0].fine_step_s
-        self._size = int(round((self.end_s - self.start_s) / self._fine_step_s)) + 2
-        self._table = np.zeros((2, 2 * self._size), complex)  # value and slope; both ears
-        self._turning = np.zeros((2, 2 * self._size), complex)  # turning time and its slope
+        self.fine_step_s = pulses[0].fine_step_s
+        size = int(round((self.end_s - self.start_s) / self.fine_step_s)) + 2
+        self.table = np.zeros((2, size, 4), complex)
         # No turn at the left pulse's peak, so that velocity is not confounded with phase.
-        at_peak = int(round((pulses[0].peak_time_s - pulses[0].first_time_s) / self._fine_step_s))
+        at_peak = int(round((pulses[0].peak_time_s - pulses[0].first_time_s) / self.fine_step_s))
         for ear, pulse in enumerate(pulses):
-            first = int(round((pulse.first_time_s - self.start_s) / self._fine_step_s))
-            part = slice(ear * self._size + first, ear * self._size + first + pulse.table.size)
-            self._table[0, part] = pulse.table
-            self._table[1, part] = pulse.slope
-            self._turning[0, part] = pulse.turning_s - pulses[0].turning_s[at_peak]
-            self._turning[1, part] = np.gradient(pulse.turning_s, self._fine_step_s)
-
-    def evaluate(self, time_s: FloatArray) -> tuple[ComplexArray, ComplexArray]:
-        """Value and derivative at times of shape (2, ...), left ear first."""
-        return self._look_up(self._table, time_s)
-
-    def turning(self, time_s: FloatArray) -> tuple[ComplexArray, ComplexArray]:
-        """Turning time (see `PulseTemplate`) and its derivative, like `evaluate`."""
-        return self._look_up(self._turning, time_s)
-
-    def _look_up(
-        self, table: ComplexArray, time_s: FloatArray
-    ) -> tuple[ComplexArray, ComplexArray]:
-        position = (time_s - self.start_s) / self._fine_step_s
-        np.minimum(np.maximum(position, 0.0, out=position), self._size - 1 - 1e-9, out=position)
-        index = position.astype(np.intp)
-        fraction = position - index
-        index[1] += self._size
-        low = table[:, index]
-        value, slope = low + fraction * (table[:, index + 1] - low)
-        return value, slope
+            first = int(round((pulse.first_time_s - self.start_s) / self.fine_step_s))
+            turning_s = pulse.turning_s - pulses[0].turning_s[at_peak]
+            rate = np.gradient(pulse.turning_s, self.fine_step_s)
+            part = np.stack([pulse.table, pulse.slope, turning_s, rate], axis=1)
+            self.table[ear, first : first + pulse.table.size] = part
 
 
 def _core(pulses: tuple[PulseTemplate, PulseTemplate]) -> tuple[float, float]:

@@ -4,11 +4,12 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
-from numpy.lib.stride_tricks import sliding_window_view
 
 from ..types import ComplexArray, FloatArray
+from . import kernels_ear, kernels_search
 from .conditioning import Conditioned
 from .model import HeadModel
 
@@ -24,26 +25,11 @@ def matched_filter(model: HeadModel, ping: Conditioned, samples: ComplexArray) -
     Element k belongs to the delay ``time_s[k]`` (start of the drive to arrival); in noise its
     square is exponential with mean 1.
     """
-    result = np.zeros(samples.shape)
+    result = np.empty(samples.shape)
     for ear, pulse in enumerate(model.pulses):
         template = pulse.sampled(ping.step_s, -pulse.start_s % ping.step_s)
         lead = int(round((-pulse.start_s) // ping.step_s))
-        weight2 = ping.weight[ear] ** 2
-        n, size = samples.shape[1], template.size
-        padded = np.zeros((2, n + size), complex)
-        padded[0, lead : lead + n] = samples[ear] * weight2
-        padded[1, lead : lead + n] = weight2
-        windows = sliding_window_view(padded, size, axis=1)[:, :n]
-        match = windows[0] @ template.conj()
-        energy = windows[1].real @ np.abs(template) ** 2
-        full = (
-            float(np.sum(np.abs(template) ** 2)) * float(np.median(weight2[weight2 > 0]))
-            if (weight2 > 0).any()
-            else 1.0
-        )
-        # Where most of the pulse is masked, a match says nothing.
-        good = energy > 1e-3 * full
-        result[ear, good] = np.abs(match[good]) / np.sqrt(energy[good])
+        result[ear] = kernels_ear.matched(samples[ear], ping.weight[ear], template, lead)
     return result
 
 
@@ -108,16 +94,7 @@ class Scan:
 
     def lobes(self) -> FloatArray:
         """Bearings at which the carriers of both ears agree."""
-        phase = self.phase_rad
-        turn = np.angle(np.exp(1j * np.diff(phase)))
-        # The phase wraps at +-pi; a step that crosses 0 keeps its size when unwrapped.
-        ahead = phase >= 0.0  # a phase of exactly 0 belongs to one side, or it would count twice
-        crosses = (ahead[:-1] != ahead[1:]) & (np.abs(phase[:-1]) < math.pi / 2)
-        at = np.nonzero(crosses & (turn != 0.0))[0]
-        share = -phase[at] / turn[at]
-        return np.asarray(
-            self.bearing_rad[at] + share * (self.bearing_rad[at + 1] - self.bearing_rad[at])
-        )
+        return kernels_search.lobes(self.bearing_rad, self.phase_rad)
 
 
 def scan(
@@ -140,82 +117,29 @@ def scan(
     from the geometry on the fine one. The prior of a bearing is proportional to the better
     ear's gain: an object far off the beams must be so much stronger to be heard.
     """
-    steps = max(1, int(round(half_width_m / _RANGE_STEP_M)))
-    offset_m = np.linspace(-half_width_m, half_width_m, 2 * steps + 1)
-    coarse = np.linspace(bearing_rad[0], bearing_rad[-1], _COARSE_BEARINGS)
-    match, energy, prior = _coarse(model, ping, samples, range_m, offset_m, coarse)
-    left, right = np.abs(match)
-    aligned = (left + right) ** 2 / energy + prior
-    i = int(np.argmax(aligned.max(axis=1)))
-    best_range = range_m + float(offset_m[i])
-    fine = np.array([np.interp(bearing_rad, coarse, row) for row in match[:, i]])
-    geometry = model.geometry(np.full(bearing_rad.shape, best_range), bearing_rad)
-    fine *= model.carrier(geometry).conj()
-    left, right = np.abs(fine)
-    energy_fine = np.interp(bearing_rad, coarse, energy[i])
-    stronger = np.where(left >= right, fine[0], fine[1])
-    direction = stronger / np.maximum(np.abs(stronger), 1e-30)
-    return Scan(
-        range_m=best_range,
-        range_sigma_m=_range_sigma(aligned, offset_m),
-        bearing_rad=bearing_rad,
-        aligned=(left + right) ** 2 / energy_fine + np.interp(bearing_rad, coarse, prior),
-        phase_rad=np.angle(fine[1] * fine[0].conj()),
-        sharpness=2.0 * left * right / energy_fine,
-        strength=direction * (left + right) / energy_fine,
-    )
-
-
-def _coarse(
-    model: HeadModel,
-    ping: Conditioned,
-    samples: ComplexArray,
-    range_m: float,
-    offset_m: FloatArray,
-    bearing_rad: FloatArray,
-) -> tuple[ComplexArray, FloatArray, FloatArray]:
-    """Matches (2, n_range, n_bearing) without carrier, energies and log prior of the bearing."""
-    geometry = model.geometry(np.full(bearing_rad.shape, range_m), bearing_rad)
-    shift_s = 2.0 * offset_m / model.speed_m_s
-    match = np.empty((2, offset_m.size, bearing_rad.size), complex)
-    energy = np.full(match.shape[1:], 1e-30)
-    for ear in range(2):
-        delay = geometry.delay_s[ear][None, :] + shift_s[:, None]
-        b, e = _correlate(model, ping, samples, ear, delay)
-        match[ear] = geometry.gain[ear] * b
-        energy += geometry.gain[ear] ** 2 * e
+    coarse = _coarse_bearings(float(bearing_rad[0]), float(bearing_rad[-1]))
+    offset_m = _offsets(half_width_m)
+    geometry = model.geometry(np.full(coarse.size, range_m), coarse)
     prior = np.log(np.maximum(geometry.gain.max(axis=0), 1e-3))
-    return match, energy, prior
-
-
-def _range_sigma(aligned: FloatArray, offset_m: FloatArray) -> float:
-    weight = np.exp(aligned - aligned.max()).sum(axis=1)
-    weight = weight / weight.sum()
-    mean = float(weight @ offset_m)
-    return math.sqrt(float(weight @ (offset_m - mean) ** 2))
-
-
-def _correlate(
-    model: HeadModel, ping: Conditioned, samples: ComplexArray, ear: int, delay_s: FloatArray
-) -> tuple[ComplexArray, FloatArray]:
-    """Weighted match and energy of an ear's pulse at delays of any shape (interpolated)."""
-    pulse = model.pulses[ear]
-    fine = ping.step_s / _FINE
-    low, high = float(delay_s.min()) - fine, float(delay_s.max()) + 2 * fine
-    grid = low + fine * np.arange(int((high - low) / fine) + 1)
-    start = int(np.searchsorted(ping.time_s, low + pulse.start_s))
-    stop = int(np.searchsorted(ping.time_s, high + pulse.end_s))
-    if stop <= start:
-        return np.zeros(delay_s.shape, complex), np.zeros(delay_s.shape)
-    time = ping.time_s[start:stop]
-    shape = pulse.evaluate(time[None, :] - grid[:, None])[0]
-    weight2 = ping.weight[ear, start:stop] ** 2
-    b = shape.conj() @ (samples[ear, start:stop] * weight2)
-    e = np.abs(shape) ** 2 @ weight2
-    position = (delay_s - low) / fine
-    index = np.minimum(position.astype(np.intp), grid.size - 2)
-    fraction = position - index
-    return (
-        b[index] + fraction * (b[index + 1] - b[index]),
-        e[index] + fraction * (e[index + 1] - e[index]),
+    places = geometry.delay_s, geometry.gain, offset_m * (2.0 / model.speed_m_s)
+    match, energy = kernels_search.coarse_scan(
+        model.arrays, ping.time_s, samples, ping.weight, *places, _FINE
     )
+    i, range_sigma_m = kernels_search.best_shift(match, energy, prior, offset_m)
+    best_range = range_m + float(offset_m[i])
+    delay_s = model.delays(np.full(bearing_rad.size, best_range), bearing_rad)
+    found = kernels_search.fine_scan(
+        model.arrays, coarse, match[:, i].copy(), energy[i], prior, bearing_rad, delay_s
+    )
+    return Scan(best_range, range_sigma_m, bearing_rad, *found)
+
+
+@lru_cache(maxsize=16)
+def _coarse_bearings(first_rad: float, last_rad: float) -> FloatArray:
+    return np.linspace(first_rad, last_rad, _COARSE_BEARINGS)
+
+
+@lru_cache(maxsize=64)
+def _offsets(half_width_m: float) -> FloatArray:
+    steps = max(1, int(round(half_width_m / _RANGE_STEP_M)))
+    return np.linspace(-half_width_m, half_width_m, 2 * steps + 1)

@@ -10,11 +10,13 @@ from __future__ import annotations
 import math
 
 import numpy as np
+from scipy.linalg.blas import cherk
 
 from ..types import ComplexArray, FloatArray
+from . import kernels_search
 from .conditioning import Conditioned
 from .config import ProcessingConfig
-from .joint import signals, window_of
+from .joint import values, window_of
 from .model import HeadModel
 from .objects import Objects
 
@@ -60,18 +62,32 @@ def best_pairs(
     places = _places(model, range_m, config)
     window = window_of(model, ping, places)
     weight = ping.weight[:, window]
-    rendered = signals(model, places, ping.time_s[window]).value * weight[:, None, :]
-    basis = rendered.transpose(1, 0, 2).reshape(len(places), -1).astype(np.complex64)
+    rendered = values(model, places, ping.time_s[window]) * weight
+    basis = rendered.reshape(len(places), -1).astype(np.complex64)
     norm = np.maximum(np.sqrt(np.sum(np.abs(basis) ** 2, axis=1)), 1e-9)
     basis /= norm[:, None]
-    match = basis.conj() @ (samples[:, window] * weight).ravel().astype(np.complex64)
-    overlap = basis.conj() @ basis.T
+    conjugate = basis.conj()
+    match = conjugate @ (samples[:, window] * weight).ravel().astype(np.complex64)
+    # basis.conj() @ basis.T, of which the upper triangle is enough.
+    overlap = cherk(1.0, conjugate.T, trans=2, lower=1).T
     gain = model.geometry(places.range_m, places.bearing_rad).gain.max(axis=0)
-    score = _scores(match, overlap, gain / norm, gain)
-    kept = np.argpartition(score.ravel(), -_KEPT)[-_KEPT:]
-    kept = kept[np.argsort(score.ravel()[kept])[::-1]]
-    pairs = [divmod(int(flat), len(places)) for flat in kept]
-    return [_pair(places, i, j, match, overlap, norm) for i, j in _distinct(pairs, places, model)]
+    pair_gain, rarity = kernels_search.pair_scores(
+        match, overlap, gain / norm, gain, _OVERLAP_LIMIT
+    )
+    score = pair_gain - np.log(rarity)
+    best = np.argpartition(score, -_KEPT)[-_KEPT:] if score.size > _KEPT else np.arange(score.size)
+    best = best[np.argsort(score[best])[::-1]]
+    best = best[np.isfinite(score[best])]
+    lobe = 0.5 * model.speed_m_s / model.receiver.carrier_hz / model.head.baseline_m
+    pairs = kernels_search.distinct_pairs(best, places.bearing_rad, lobe, _TRIALS)
+    i, j = pairs[:, 0], pairs[:, 1]
+    # Strengths of the signals of unit energy: G^-1 b with the overlap G of the two.
+    common = overlap[i, j]
+    free = (1.0 - np.abs(common) ** 2) * norm[pairs].T
+    one = (match[i] - common * match[j]) / free[0]
+    other = (match[j] - np.conj(common) * match[i]) / free[1]
+    strength = np.stack([one, other], axis=1).astype(complex)
+    return [places.take(p).with_strength(s) for p, s in zip(pairs, strength, strict=True)]
 
 
 def _places(model: HeadModel, range_m: float, config: ProcessingConfig) -> Objects:
@@ -88,48 +104,3 @@ def _places(model: HeadModel, range_m: float, config: ProcessingConfig) -> Objec
     ranges = range_m + np.linspace(-reach, reach, per_range)
     r, b = (part.ravel() for part in np.meshgrid(ranges, bearing, indexing="ij"))
     return Objects(np.maximum(r, 1e-3), b, np.zeros(r.size), np.ones(r.size, complex))
-
-
-def _scores(
-    match: ComplexArray, overlap: ComplexArray, heard: FloatArray, beam_gain: FloatArray
-) -> FloatArray:
-    """Gain less prior cost of every pair of unit-energy signals, upper triangle.
-
-    The gain is b^H G^-1 b with the 2 x 2 overlap G, the strengths G^-1 b; ``heard`` turns a
-    strength into the amplitude in the better ear.
-    """
-    common = np.minimum(overlap.real**2 + overlap.imag**2, 1.0)
-    free = np.maximum(1.0 - common, 1e-3)
-    strength = np.abs(match[:, None] - overlap * match[None, :]) / free  # of i beside j
-    power = np.abs(match) ** 2
-    gain = power[None, :] + strength**2 * free
-    cost = implausibility(strength * heard[:, None], beam_gain[:, None])
-    score = gain - cost - cost.T
-    score[common > _OVERLAP_LIMIT] = -np.inf
-    score[np.tril_indices(match.size)] = -np.inf
-    return np.asarray(score)
-
-
-def _distinct(
-    pairs: list[tuple[int, int]], places: Objects, model: HeadModel
-) -> list[tuple[int, int]]:
-    """The first of each neighbourhood: bearings that differ by more than half a lobe."""
-    lobe = 0.5 * model.speed_m_s / model.receiver.carrier_hz / model.head.baseline_m
-    chosen: list[tuple[int, int]] = []
-    known: list[FloatArray] = []
-    for i, j in pairs:
-        bearings = np.sort(places.bearing_rad[[i, j]])
-        if all(np.abs(bearings - k).max() > lobe for k in known):
-            chosen.append((i, j))
-            known.append(bearings)
-        if len(chosen) == _TRIALS:
-            break
-    return chosen
-
-
-def _pair(
-    places: Objects, i: int, j: int, match: ComplexArray, overlap: ComplexArray, norm: FloatArray
-) -> Objects:
-    gram = np.array([[1.0, overlap[i, j]], [np.conj(overlap[i, j]), 1.0]])
-    strength = np.linalg.solve(gram, match[[i, j]]) / norm[[i, j]]
-    return places.take([i, j]).with_strength(strength)
