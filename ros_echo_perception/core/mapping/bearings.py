@@ -30,7 +30,7 @@ _AROUND_RAD = 0.3
 _SIDE_RAD = 0.3
 """From here on the level ratio may be folded: the broad share reaches to the side."""
 _MIN_LOOKS = 2
-_PEAK_SHARE = 0.04
+_PEAK_SHARE = 0.08
 _SAME_RAD = 0.08
 _LEAST_SIGMA_M, _MOST_SIGMA_M = 0.006, 0.03
 

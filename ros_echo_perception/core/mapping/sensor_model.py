@@ -40,7 +40,7 @@ from .hypotheses import Hypotheses
 
 _SPAN_SIGMAS = 2.5
 _GOLDEN_SECTION = 0.618034
-_MAX_SAMPLES = 8_000
+_MAX_SAMPLES = 3_500
 _MIN_RANGE_SAMPLES, _MIN_BEARING_SAMPLES = 5, 11
 _MIN_RANGE_SIGMA_CELLS = 0.25
 _MARGIN_CELLS = 1.5
@@ -73,8 +73,8 @@ def arc_samples(
 
     They lie closer than the cells, and each row is shifted against the one before by the
     golden section, so that no row of points falls on one side of a border of cells as a whole.
-    If it came to more than `_MAX_SAMPLES` points, the widest hypotheses, which say the least
-    of any one cell, get fewer: the work on a ping is bounded whatever its detections say.
+    Where all come to more than `_MAX_SAMPLES` points, the widest hypotheses, which say the least
+    of any one cell, get fewer, down to a fixed least number each: the work on a ping is bounded whatever its detections say.
     """
     h = hypotheses
     range_sigma = np.hypot(h.range_sigma_m, _MIN_RANGE_SIGMA_CELLS * resolution_m)

@@ -58,6 +58,7 @@ class GridUpdater:
         self.grid, self.config = grid, config
         n = grid.log_odds.size
         self._firm, self._soft, self._free = np.zeros(n), np.zeros(n), np.zeros(n)
+        self._number = np.zeros(n, np.int64)
         self._soft_cap = _log_odds(config.soft_max_probability)
 
     def read(self, cells: IntArray, time_s: float) -> FloatArray:
@@ -93,7 +94,10 @@ class GridUpdater:
         np.add.at(self._firm, hits.cells, hits.firm)
         np.add.at(self._soft, hits.cells, hits.soft)
         np.add.at(self._free, free.cells, free.weight)
-        # Cells may repeat: all their copies read and write the same values.
+        # Each cell once from here on: of equal cells one keeps its number in the scratch array.
+        number = np.arange(cells.size)
+        self._number[cells] = number
+        cells = cells[self._number[cells] == number]
         masses = self._firm[cells], self._soft[cells], np.minimum(self._free[cells], 1.0)
         for scratch in (self._firm, self._soft, self._free):
             scratch[cells] = 0.0
