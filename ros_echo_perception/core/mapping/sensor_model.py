@@ -74,7 +74,8 @@ def arc_samples(
     They lie closer than the cells, and each row is shifted against the one before by the
     golden section, so that no row of points falls on one side of a border of cells as a whole.
     Where all come to more than `_MAX_SAMPLES` points, the widest hypotheses, which say the least
-    of any one cell, get fewer, down to a fixed least number each: the work on a ping is bounded whatever its detections say.
+    of any one cell, get fewer, down to a fixed least number each: the work on a ping is bounded
+    whatever its detections say.
     """
     h = hypotheses
     range_sigma = np.hypot(h.range_sigma_m, _MIN_RANGE_SIGMA_CELLS * resolution_m)
