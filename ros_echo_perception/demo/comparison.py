@@ -44,10 +44,12 @@ class DetectionScore:
     """Detections against true echoes.
 
     ``must_find`` counts findable true echoes of 15 dB and more, ``found`` those of them that were
-    found; ``n_matched`` counts detections that are any true echo; errors are of matched pairs.
+    found; ``n_at_range`` counts detections at the range of any true echo, ``n_matched`` those that
+    have its bearing too; errors are of matched pairs.
     """
 
     n_detections: int
+    n_at_range: int
     n_matched: int
     must_find: int
     found: int
@@ -59,12 +61,13 @@ def score_detections(
     pings: Iterable[tuple[Sequence[SeenDetection], Sequence[TrueEcho]]],
 ) -> DetectionScore:
     """Match one to one in each ping: range within 5 cm + 2 %, bearing within 15 degrees."""
-    n_detections = n_matched = must_find = found = 0
+    n_detections = n_at_range = n_matched = must_find = found = 0
     range_errors: list[float] = []
     bearing_errors: list[float] = []
     for detections, truth in pings:
         pairs = match(detections, truth)
         n_detections += len(detections)
+        n_at_range += sum(any(_along(d, t) <= 1.0 for t in truth) for d in detections)
         n_matched += len(pairs)
         must_find += sum(t.must_be_found for t in truth)
         found += sum(truth[j].must_be_found for _, j in pairs)
@@ -73,9 +76,14 @@ def score_detections(
             wrap_angle(detections[i].bearing_rad - truth[j].bearing_rad) for i, j in pairs
         ]
     return DetectionScore(
-        n_detections, n_matched, must_find, found,
+        n_detections, n_at_range, n_matched, must_find, found,
         np.array(range_errors, float), np.array(bearing_errors, float),
     )  # fmt: skip
+
+
+def _along(d: SeenDetection, t: TrueEcho) -> float:
+    """Difference in range, in gates."""
+    return abs(d.range_m - t.range_m) / (RANGE_GATE_M + RANGE_GATE_SHARE * t.range_m)
 
 
 def match(detections: Sequence[SeenDetection], truth: Sequence[TrueEcho]) -> list[tuple[int, int]]:
@@ -86,7 +94,7 @@ def match(detections: Sequence[SeenDetection], truth: Sequence[TrueEcho]) -> lis
     cost = np.full((len(detections), len(truth)), outside)
     for i, d in enumerate(detections):
         for j, t in enumerate(truth):
-            along = abs(d.range_m - t.range_m) / (RANGE_GATE_M + RANGE_GATE_SHARE * t.range_m)
+            along = _along(d, t)
             across = abs(wrap_angle(d.bearing_rad - t.bearing_rad)) / BEARING_GATE_RAD
             if along <= 1.0 and across <= 1.0:
                 cost[i, j] = along + across

@@ -79,7 +79,9 @@ def _latency(monitor: Monitor) -> list[Figure]:
 
 def _truth(score: DetectionScore) -> list[Figure]:
     return [
-        Figure("precision", "detections that are true echoes",
+        Figure("at_true_range", "detections at the range of a true echo",
+               _share(score.n_at_range, score.n_detections), "%"),
+        Figure("precision", "detections that also have its bearing within 15 deg",
                _share(score.n_matched, score.n_detections), "%"),
         Figure("recall", "findable echoes of 15 dB or more found",
                _share(score.found, score.must_find), "%"),

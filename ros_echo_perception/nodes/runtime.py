@@ -6,6 +6,7 @@ import sys
 from collections.abc import Callable
 
 import rclpy
+from rclpy._rclpy_pybind11 import RCLError
 from rclpy.executors import ExternalShutdownException
 from rclpy.node import Node
 
@@ -28,6 +29,9 @@ def run(create_node: Callable[[], Node]) -> None:
         sys.exit(1)
     except (KeyboardInterrupt, ExternalShutdownException):
         pass
+    except RCLError:
+        if rclpy.ok():
+            raise  # a callback was at work when the signal closed the context: no fault
     finally:
         _close(node)
 

@@ -65,7 +65,7 @@ def _detection(
         envelope_sigma_s=model.pulses[0].envelope_sigma_s,
         radial_velocity_m_s=float(one.velocity_m_s[0]) if informative else math.nan,
         radial_velocity_sigma_m_s=velocity_sigma if informative else math.nan,
-        flags=_flags(ping, item.window, posterior),
+        flags=_flags(explained, i, posterior),
     )
 
 
@@ -127,13 +127,18 @@ def _ears(ping: Conditioned, snr_db: tuple[float, float]) -> Ears:
     return Ears.BOTH
 
 
-def _flags(ping: Conditioned, window: slice, posterior: BearingPosterior) -> DetectionFlag:
+def _flags(explained: Explained, i: int, posterior: BearingPosterior) -> DetectionFlag:
+    scene = explained.scene
+    ping, item = scene.ping, scene.items[i]
     flags = DetectionFlag.NONE
-    if ping.clipped[:, window].any():
+    if ping.clipped[:, item.window].any():
         flags |= DetectionFlag.SATURATED
     if posterior.ambiguous:
         flags |= DetectionFlag.BEARING_AMBIGUOUS
-    if float(ping.time_s[window.start]) < ping.blanking_end_s:
+    # Several pairs of objects explain the ears alike, or one object explains them badly.
+    if item.rivals or scene.misfit(i) > explained.threshold:
+        flags |= DetectionFlag.CUES_CONTRADICT
+    if float(ping.time_s[item.window.start]) < ping.blanking_end_s:
         flags |= DetectionFlag.NEAR_DIRECT_PULSE
     return flags
 
