@@ -18,7 +18,6 @@ _TOLERANCE = 2e-3  # of the cost, nats
 _MAX_STEP_M, _MAX_STEP_RAD = 0.02, 0.05
 _UNKNOWNS = 5  # of an object: range, bearing, velocity, two parts of the strength
 
-
 Leg = tuple[float, float, float, float, float, float]
 Sound = tuple[complex, complex, complex, complex]
 
@@ -175,15 +174,9 @@ def sounds(
 
 @compiled
 def _evaluate(
-    head: HeadArrays,
-    time_s: FloatArray,
-    samples: ComplexArray,
-    weight: FloatArray,
-    unknowns: FloatArray,
-    velocity_sigma: float,
-    jacobian: FloatArray,
-    residual: FloatArray,
-) -> float:
+    head: HeadArrays, time_s: FloatArray, samples: ComplexArray, weight: FloatArray,
+    unknowns: FloatArray, velocity_sigma: float, jacobian: FloatArray, residual: FloatArray,
+) -> float:  # fmt: skip
     """Cost of k objects (k, 5) in one excerpt; fills Jacobian (5 k, 4 n) and residual (4 n,).
 
     Columns: real and imaginary parts of the left ear, then of the right one, weighted.
@@ -251,14 +244,9 @@ def _moved(unknowns: FloatArray, step: FloatArray, max_bearing_rad: float) -> Fl
 
 @compiled
 def refine(
-    head: HeadArrays,
-    time_s: FloatArray,
-    samples: ComplexArray,
-    weight: FloatArray,
-    unknowns: FloatArray,
-    velocity_sigma: float,
-    max_bearing_rad: float,
-) -> tuple[FloatArray, float, FloatArray]:
+    head: HeadArrays, time_s: FloatArray, samples: ComplexArray, weight: FloatArray,
+    unknowns: FloatArray, velocity_sigma: float, max_bearing_rad: float,
+) -> tuple[FloatArray, float, FloatArray]:  # fmt: skip
     """Damped least squares: k objects (k, 5), cost, and normal matrix (5 k, 5 k) at the end.
 
     The excerpt has times (n,), samples and weights (2, n).
