@@ -248,21 +248,29 @@ def test_no_echoes_give_an_empty_cloud():
 
 
 def test_markers_draw_two_sigmas_and_one_eared_echoes_as_their_arc():
-    msg = views.markers_to_msg(result(detection(), one_sided()), header())
+    msg = views.markers_to_msg(result(detection(alternatives=()), one_sided()), header())
     dots, sectors, arcs = msg.markers
     assert len(dots.points) == 1
     assert dots.points[0].y == pytest.approx(2.0 * math.sin(0.3))
     radius = [math.hypot(p.x, p.y) for p in sectors.points]
     angle = [math.atan2(p.y, p.x) for p in sectors.points]
     assert (min(radius), max(radius)) == pytest.approx((2.0 - 0.008, 2.0 + 0.008))
-    assert min(angle) == pytest.approx(0.3 - 0.04)
-    assert max(angle) == pytest.approx(0.5 + 0.04)  # the other possible bearing is drawn too
+    assert (min(angle), max(angle)) == pytest.approx((0.3 - 0.04, 0.3 + 0.04))
     arc = [math.atan2(p.y, p.x) for p in arcs.points]
     assert (min(arc), max(arc)) == pytest.approx((0.0, 0.6))
     assert {round(math.hypot(p.x, p.y), 9) for p in arcs.points} == {1.0}
     for marker in msg.markers:
         assert len(marker.colors) == len(marker.points)
         assert marker.action == Marker.ADD
+
+
+def test_markers_draw_every_bearing_that_remains_possible_and_nothing_between():
+    echo = detection(bearing_rad=0.4, alternatives=((0.1, 0.6), (0.8, 0.4)), bearing_sigma_rad=0.3)
+    _, sectors, _ = views.markers_to_msg(result(echo), header()).markers
+    angle = np.array([math.atan2(p.y, p.x) for p in sectors.points])
+    assert np.all((np.abs(angle - 0.1) < 0.0601) | (np.abs(angle - 0.8) < 0.0601))
+    strength = {round(c.a, 3) for c in sectors.colors}
+    assert strength == {round(0.4 * w * 0.875, 3) for w in (0.6, 0.4)}
 
 
 def test_markers_of_a_silent_ping_remove_the_last_ones():

@@ -46,7 +46,8 @@ DOUBTFUL = (0.66, 0.35, 0.75)
 
 _SIGMAS_DRAWN = 2.0
 _THINNEST_M = 0.01  # a sector thinner than this cannot be seen
-_STEP_RAD = math.radians(2.0)
+_STEP_RAD = math.radians(5.0)
+_ALTERNATIVE_SIGMA_RAD = 0.03  # one of several bearings: a stroke, not the scatter of all
 _LIFETIME = Duration(sec=1)
 _DOT_M = 0.05
 
@@ -99,8 +100,8 @@ def markers_to_msg(result: PingResult, header: Any) -> MarkerArray:
     arcs = _marker(header, "one_ear", Marker.LINE_LIST, 0.015)
     for echo in both:
         _add(dots, [_point(echo.range_m, echo.bearing_rad)], _colour(echo, 1.0))
-        for bearing, weight in _bearings(echo):
-            _add(sectors, _sector(echo, bearing), _colour(echo, 0.4 * weight))
+        for bearing, sigma, weight in _bearings(echo):
+            _add(sectors, _sector(echo, bearing, sigma), _colour(echo, 0.4 * weight))
     for echo in single:
         _add(arcs, _arc(echo), _colour(echo, 0.9))
     for marker in (dots, sectors, arcs):
@@ -127,16 +128,18 @@ def _colour(echo: Detection, alpha: float) -> ColorRGBA:
     return ColorRGBA(r=r, g=g, b=b, a=max(0.1, alpha * echo.existence_probability))
 
 
-def _bearings(echo: Detection) -> Iterator[tuple[float, float]]:
-    """The bearing and the alternatives with their weights."""
-    yield echo.bearing_rad, 1.0 - sum(weight for _, weight in echo.alternatives)
-    yield from echo.alternatives
+def _bearings(echo: Detection) -> Iterator[tuple[float, float, float]]:
+    """What to draw: bearing, its sigma, weight; each of the bearings that remain possible."""
+    if not echo.alternatives:
+        yield echo.bearing_rad, echo.bearing_sigma_rad, 1.0
+    for bearing, weight in echo.alternatives:
+        yield bearing, min(echo.bearing_sigma_rad, _ALTERNATIVE_SIGMA_RAD), weight
 
 
-def _sector(echo: Detection, bearing_rad: float) -> list[Point]:
+def _sector(echo: Detection, bearing_rad: float, sigma_rad: float) -> list[Point]:
     """Triangles of the region within two sigmas of range and bearing."""
     depth = max(_SIGMAS_DRAWN * echo.range_sigma_m, _THINNEST_M / 2)
-    width = _SIGMAS_DRAWN * echo.bearing_sigma_rad
+    width = _SIGMAS_DRAWN * sigma_rad
     near, far = max(echo.range_m - depth, 0.0), echo.range_m + depth
     points = []
     for start, end in _pieces(bearing_rad - width, bearing_rad + width):

@@ -74,6 +74,7 @@ class ObjectFitter:
         self.range_min_m = range_min(model, ping)
         self.scene = Scene(model, ping, Priors(config.velocity_sigma_m_s, config.max_bearing_rad))
         self.interference = False
+        self._searches_left = config.max_pair_searches
         self._lobe_rad = model.speed_m_s / model.receiver.carrier_hz / model.head.baseline_m
         self._reach_m = model.speed_m_s * model.pulses[0].envelope_sigma_s
 
@@ -158,7 +159,7 @@ class ObjectFitter:
         Two objects at one range pose as one between them, a maximum of the likelihood for one
         object from which no small step leads away.
         """
-        for _ in range(self.config.max_pair_searches):
+        for _ in range(self._searches_left):
             misfit = [self.scene.misfit(i) for i in range(len(self.scene))]
             if not misfit or max(misfit) < _MISFIT_SHARE * self.threshold:
                 return
@@ -203,7 +204,7 @@ class ObjectFitter:
             pairs = self._close_pairs()
             if not any(self._try_merge(pair) for pair in pairs):
                 break
-        for pair in self._close_pairs()[: self.config.max_pair_searches]:
+        for pair in self._close_pairs()[: self._searches_left]:
             if not any(self.scene.rivals(pair)):
                 self._try_pairs(pair)
 
@@ -269,6 +270,7 @@ class ObjectFitter:
         window = scene.span(members)
         if self.ping.clipped[:, window].any():
             return False
+        self._searches_left -= 1
         samples = scene.alone(members)
         centre = float(np.mean(scene.objects.range_m[members]))
         starts = best_pairs(self.model, self.ping, samples, centre, self.config)
