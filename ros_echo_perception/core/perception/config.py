@@ -23,7 +23,7 @@ class ProcessingConfig(Settings):
     )
     max_echoes: int = setting(12, "At most this many echoes are fitted in one ping", "", 1, 40)
     max_pair_searches: int = setting(
-        2,
+        1,
         "Times in a ping that two objects are looked for where one leaves too much behind; "
         "each takes about as long as two echoes, 0 is fastest",
         "",
