@@ -25,8 +25,8 @@ _SWITCH_NATS = 1.0
 _CLICK_NATS = 4.0
 _RIVAL_NATS = 4.0
 _EXTRA_ROUNDS = 12
-_MISFIT_SHARE = 0.7
-"""A pair must gain a threshold; one object that leaves much less than that needs no look."""
+_MISFIT_SHARE = 1.0
+"""A pair must gain a threshold; one object that leaves less than that needs no look."""
 _MAX_LOOKS = 2
 _LOBES_TRIED = 3
 _CLIP_REACH_S = 0.5e-3
