@@ -16,6 +16,7 @@ from ros_echo_perception.demo.__main__ import main as demo
 from ros_echo_perception.nodes import readme_tables, topics
 from ros_echo_perception.nodes.settings import SECTIONS
 from ros_echo_perception.offline.cli import main as offline
+from ros_echo_perception.offline.marked_block import replace_block
 from ros_echo_perception.offline.results_table import BEGIN, END
 
 ROOT = Path(__file__).resolve().parent.parent
@@ -114,7 +115,7 @@ def test_topics_and_services_are_listed_with_their_quality_of_service():
 def test_update_replaces_the_block_and_nothing_else(tmp_path):
     file = tmp_path / "README.md"
     file.write_text(f"before\n{readme_tables.BEGIN}\nold\n{readme_tables.END}\nafter\n")
-    readme_tables.replace_block(file, "new")
+    replace_block(file, readme_tables.BEGIN, readme_tables.END, "new")
     assert file.read_text() == (f"before\n{readme_tables.BEGIN}\nnew\n{readme_tables.END}\nafter\n")
 
 
@@ -122,7 +123,7 @@ def test_update_of_a_file_without_markers_is_refused(tmp_path):
     file = tmp_path / "README.md"
     file.write_text("text\n")
     with pytest.raises(FileFormatError, match=r"README.md: lacks <!-- parameters:begin -->"):
-        readme_tables.replace_block(file, "new")
+        replace_block(file, readme_tables.BEGIN, readme_tables.END, "new")
     assert file.read_text() == "text\n"
 
 

@@ -41,7 +41,8 @@ def test_shipped_heads_have_different_baselines():
 
 def test_calibrated_sample_is_a_unit_of_its_head():
     unit, nominal = load_head(UNIT), load_head(HEADS[1])
-    assert unit.calibrated and unit.name == nominal.name
+    assert unit.calibrated
+    assert unit.name == nominal.name
     assert 5e-6 < unit.latency_s < 60e-6
     assert abs(unit.baseline_m - nominal.baseline_m) < 2e-3
 

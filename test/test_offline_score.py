@@ -9,7 +9,8 @@ from offline_helpers import HEADS, head_file, refused, run
 
 from ros_echo_perception.core.errors import FileFormatError
 from ros_echo_perception.core.head import load_head
-from ros_echo_perception.offline.results_table import BEGIN, END, grid, markdown, replace_block
+from ros_echo_perception.offline.marked_block import replace_block
+from ros_echo_perception.offline.results_table import BEGIN, END, grid, markdown
 from ros_echo_perception.offline.score import _module
 
 ROOT = Path(__file__).resolve().parent.parent
@@ -100,12 +101,12 @@ def test_every_row_is_as_wide_as_its_header():
 def test_only_the_block_between_the_markers_is_replaced(tmp_path):
     path = tmp_path / "README.md"
     path.write_text(f"above\n{BEGIN}\nold\n{END}\nbelow\n")
-    replace_block(path, "new")
-    replace_block(path, "newer")
+    replace_block(path, BEGIN, END, "new")
+    replace_block(path, BEGIN, END, "newer")
     assert path.read_text() == f"above\n{BEGIN}\nnewer\n{END}\nbelow\n"
     path.write_text(f"{END} {BEGIN}")
     with pytest.raises(FileFormatError, match="README.md: lacks"):
-        replace_block(path, "new")
+        replace_block(path, BEGIN, END, "new")
     assert path.read_text() == f"{END} {BEGIN}"
 
 

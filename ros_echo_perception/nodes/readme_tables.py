@@ -12,8 +12,9 @@ from typing import get_type_hints
 
 import click
 
-from ..core.errors import EchoPerceptionError, FileFormatError
+from ..core.errors import EchoPerceptionError
 from ..core.settings import SettingInfo, Settings, describe
+from ..offline.marked_block import replace_block
 from . import topics
 from .settings import FIXED, SECTIONS
 
@@ -115,25 +116,6 @@ def _allowed(info: SettingInfo) -> str:
     return f"{low} or more" if low else f"{high} or less"
 
 
-def replace_block(path: Path, text: str) -> None:
-    """Replace what stands between the two markers of a file.
-
-    Raises
-    ------
-    FileFormatError
-        When the file cannot be read or lacks a marker.
-    """
-    try:
-        old = path.read_text()
-    except OSError as error:
-        raise FileFormatError(f"{path}: cannot be read ({error.strerror or error}).") from None
-    before, begin, rest = old.partition(BEGIN)
-    _, end, after = rest.partition(END)
-    if not begin or not end:
-        raise FileFormatError(f"{path}: lacks {BEGIN} or, after it, {END}; add both lines.")
-    path.write_text(f"{before}{BEGIN}\n{text}\n{END}{after}")
-
-
 @click.command(context_settings={"help_option_names": ["-h", "--help"]})
 @click.option("--update", type=click.Path(path_type=Path),
               help="File whose block between the parameters markers is replaced.")  # fmt: skip
@@ -143,7 +125,7 @@ def main(update: Path | None) -> None:
         click.echo(tables())
         return
     try:
-        replace_block(update, tables())
+        replace_block(update, BEGIN, END, tables())
     except EchoPerceptionError as error:
         raise click.ClickException(str(error)) from None
 

@@ -4,10 +4,8 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from pathlib import Path
 from typing import Any
 
-from ..core.errors import FileFormatError
 from .console import quantile
 
 BEGIN, END = "<!-- results:begin -->", "<!-- results:end -->"
@@ -24,25 +22,6 @@ def markdown(report: Mapping[str, Any]) -> str:
         _notes(report),
     ]
     return "\n\n".join(part for part in parts if part)
-
-
-def replace_block(path: Path, text: str) -> None:
-    """Replace what stands between the two markers of a file.
-
-    Raises
-    ------
-    FileFormatError
-        When the file cannot be read or lacks a marker.
-    """
-    try:
-        old = path.read_text()
-    except OSError as error:
-        raise FileFormatError(f"{path}: cannot be read ({error.strerror or error}).") from None
-    before, begin, rest = old.partition(BEGIN)
-    _, end, after = rest.partition(END)
-    if not begin or not end:
-        raise FileFormatError(f"{path}: lacks {BEGIN} or, after it, {END}; add both lines.")
-    path.write_text(f"{before}{BEGIN}\n{text}\n{END}{after}")
 
 
 def grid(columns: Sequence[str], rows: Sequence[Sequence[str]]) -> str:

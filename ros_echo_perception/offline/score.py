@@ -24,8 +24,9 @@ from .console import output, progress_bar
 from .detect import DetectOutcome, process
 from .inputs import open_input
 from .map import map_drive, save_map
+from .marked_block import replace_block
 from .options import need_something
-from .results_table import markdown, replace_block
+from .results_table import BEGIN, END, markdown
 
 WORKERS = 2
 
@@ -203,4 +204,4 @@ def score_command(data: Path, work: Path, nominal: bool, update: Path | None) ->
     text = markdown(score_all(DataSet(data), work, nominal))
     output().print(text, soft_wrap=True, markup=False)
     if update is not None:
-        replace_block(update, text)
+        replace_block(update, BEGIN, END, text)
