@@ -28,6 +28,7 @@ NODES = ("processing", "mapping", "driver")
 _START_TIMEOUT_S = 30.0
 _SILENCE_S = 3.0
 _POLL_S = 0.25
+_CONSUMERS = 2  # processing, once it is warm, and the recorder
 _WINDOW_M = 16.0  # the whole room stays in the picture
 _LAST_MAP_S = 1.2  # two publishing periods of the mapping node
 
@@ -66,6 +67,7 @@ class Plan:
                 "simulator.ping_rate_hz": self.rate_hz,
                 "simulator.seed": self.seed,
                 "wait_for_consumer_s": _START_TIMEOUT_S,
+                "consumers": _CONSUMERS,
             }
         if node == "mapping":
             mount = SimulatorConfig().mount

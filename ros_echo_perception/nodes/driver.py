@@ -87,7 +87,7 @@ class DriverNode(Node):
         """Whether somebody listens; with pacing = consumer, somebody who also answers."""
         listeners = self._raw.get_subscription_count()
         if self._gate is None:
-            return listeners > 0
+            return listeners >= self.settings.consumers
         answering = self.get_publishers_info_by_topic(self._answers.topic_name)
         listening = self.get_subscriptions_info_by_topic(self._raw.topic_name)
         common = {_node_of(end) for end in answering} & {_node_of(end) for end in listening}

@@ -43,9 +43,12 @@ class DriverSettings(Settings):
     )  # fmt: skip
     wait_for_consumer_s: float = setting(
         0.0,
-        "With pacing = real_time: wait at most this long for a subscriber before the first ping",
+        "With pacing = real_time: wait at most this long for subscribers before the first ping",
         "s", 0.0, 600.0,
     )  # fmt: skip
+    consumers: int = setting(
+        1, "With wait_for_consumer_s: subscribers of raw_echo to wait for", "", 1, 100
+    )
     head_frame: str = setting("echo_head", "Frame of the head")
     base_frame: str = setting("base_link", "Frame of the robot")
     odom_frame: str = setting("odom", "Frame of the odometry")
