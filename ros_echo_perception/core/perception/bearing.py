@@ -17,10 +17,6 @@ from scipy.special import i0e, i1e
 from ..types import FloatArray
 from .search import Scan
 
-_CALIBRATED_RAD = 0.7
-_ASIDE_ERROR_PER_RAD = 0.1
-"""Beyond the bearings at which a pole is put for calibration, the beams' flanks are known ever
-less: about 1 dB between the ears for each radian (common practice for piston beams)."""
 _MIN_WEIGHT = 0.02
 _SURE_WEIGHT = 0.95
 _MAX_PEAKS = 8
@@ -77,10 +73,9 @@ def bearing_posterior(
     """
     teeth = _teeth(found)
     top = float(teeth.log_weight.max())
-    aside_rad = np.maximum(np.abs(teeth.bearing_rad) - _CALIBRATED_RAD, 0.0)
-    error2 = level_error**2 + (_ASIDE_ERROR_PER_RAD * aside_rad) ** 2
-    loss = (top - teeth.log_weight) / (1.0 + 0.5 * max(top, 0.0) * error2)
-    weight = np.exp(loss.min() - loss) * teeth.width_rad
+    softening = 1.0 + 0.5 * max(top, 0.0) * level_error**2
+    loss = (top - teeth.log_weight) / softening
+    weight = np.exp(-loss) * teeth.width_rad
     weight /= weight.sum()
     mean, spread = teeth.bearing_rad, np.maximum(teeth.spread_rad, 1e-5)
     own = int(np.argmin(np.abs(mean - fitted_bearing_rad)))
