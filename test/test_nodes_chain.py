@@ -72,13 +72,12 @@ def test_a_pole_is_found_where_it_is(start_node, driver, peer):
     states = peer.collect(DiagnosticArray, "/diagnostics")
     processing = start_node("processing", {"diagnostics_period_s": 0.2})
     peer.wait_for(lambda: peer.node.count_subscribers("/raw_echo") == 2, "processing")
-    source = driver()
+    source = driver(consumers=2)  # processing and this test
     peer.wait_for(lambda: len(found) >= 12 and len(envelopes) >= 3, "detections")
 
     # One answer for each ping, in order, with the header of the ping.
     first = found[0].sequence
     assert [m.sequence for m in found] == list(range(first, first + len(found)))
-    # (The driver waits for one subscriber; this test's own may match a ping or two later.)
     by_sequence = {m.sequence: m for m in raw}
     both = [m for m in found if m.sequence in by_sequence]
     assert len(both) >= 8
@@ -199,7 +198,7 @@ def test_as_fast_as_consumed_loses_nothing_and_goes_on_after_the_end(start_node,
     found = peer.collect(EchoDetectionArray, "detections", 200)
     states = peer.collect(DiagnosticArray, "/diagnostics")
     start_node("processing", {"max_echoes": 2})
-    driver(pacing="consumer")
+    driver(pacing="consumer", consumers=2)
     peer.wait_for(lambda: len(found) >= 60, "60 pings", 40.0)
     assert [m.sequence for m in found] == list(range(found[0].sequence, found[-1].sequence + 1))
     ahead = max(m.sequence for m in raw) - found[-1].sequence

@@ -4,6 +4,7 @@ import json
 import os
 import struct
 from array import array
+from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 
 import numpy as np
@@ -286,3 +287,22 @@ def test_type_hashes_are_those_of_the_ros_build(name):
         h["type_name"]: h["hash_string"] for h in json.loads(built.read_text())["type_hashes"]
     }
     assert typestore().hash_rihs01(full) == hashes[full]
+
+
+def test_topics_announced_and_written_from_several_threads_stay_apart(tmp_path):
+    """Two topics announced at once used to share a number: messages of one read as the other's."""
+    names = [f"/topic_{k}" for k in range(16)]
+    with BagWriter(tmp_path / "bag") as bag:
+
+        def use(name):
+            bag.add_topic(name, "std_msgs/msg/String", quality(True, False))
+            for k in range(20):
+                text = f"{name} {k}".encode() + b"\0"
+                data = b"\x00\x01\x00\x00" + len(text).to_bytes(4, "little") + text
+                bag.write(name, 1_000 + k, data)
+
+        with ThreadPoolExecutor(16) as pool:
+            list(pool.map(use, names))
+    with AnyReader([tmp_path / "bag"]) as reader:
+        seen = {(c.topic, reader.deserialize(d, c.msgtype).data) for c, _, d in reader.messages()}
+    assert seen == {(name, f"{name} {k}") for name in names for k in range(20)}

@@ -28,7 +28,7 @@ class Recorder(Node):
     """Subscribes to every topic as soon as somebody publishes it.
 
     Messages go into the bag as they came, undecoded. ``lock`` guards the monitor, which is read
-    from another thread.
+    from another thread, and the list of topics.
     """
 
     def __init__(self, bag: BagWriter, monitor: Monitor) -> None:
@@ -51,8 +51,6 @@ class Recorder(Node):
     def expect(self, topic: str, type_name: str, depth: int) -> None:
         """Subscribe to a reliable topic, also before it exists."""
         self._held_back.discard(type_name)
-        if topic in self._subscribed:
-            return
         self._subscribe(topic, type_name, quality(True, False, depth))
 
     def _discover(self) -> None:
@@ -64,7 +62,10 @@ class Recorder(Node):
                 self._subscribe(topic, types[0], _offered(profiles))
 
     def _subscribe(self, topic: str, type_name: str, qos: Qos) -> None:
-        self._subscribed.add(topic)
+        with self.lock:  # topics are found in one thread and expected in another
+            if topic in self._subscribed:
+                return
+            self._subscribed.add(topic)
         try:
             message_type = _message_class(type_name)
         except ImportError:

@@ -91,7 +91,7 @@ class DriverNode(Node):
         answering = self.get_publishers_info_by_topic(self._answers.topic_name)
         listening = self.get_subscriptions_info_by_topic(self._raw.topic_name)
         common = {_node_of(end) for end in answering} & {_node_of(end) for end in listening}
-        return bool(common) and listeners >= len(listening)
+        return bool(common) and listeners >= max(len(listening), self.settings.consumers)
 
     def _on_detections(self, msg: Any) -> None:
         if self._gate is not None:

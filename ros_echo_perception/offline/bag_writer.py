@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import shutil
+import threading
 from pathlib import Path
 from types import TracebackType
 from typing import Literal
@@ -40,7 +41,7 @@ def quality(reliable: bool, keep_last_sample: bool, depth: int = 10) -> Qos:
 
 
 class BagWriter:
-    """One rosbag2 folder; complete and readable once closed.
+    """One rosbag2 folder; complete and readable once closed. May be used from several threads.
 
     Parameters
     ----------
@@ -57,24 +58,29 @@ class BagWriter:
         _make_room(folder)
         self._writer = Writer(folder, version=9, storage_plugin=StoragePlugin.MCAP)
         self._writer.open()
+        # The library numbers topics by how many there are: two at once would share a number.
+        self._lock = threading.Lock()
         self._connections: dict[str, Connection] = {}
         self.counts: dict[str, int] = {}
 
     def add_topic(self, topic: str, type_name: str, qos: Qos) -> None:
         """Announce a topic before its first message."""
-        self._connections[topic] = self._writer.add_connection(
-            topic, type_name, typestore=typestore(), offered_qos_profiles=[qos]
-        )
-        self.counts[topic] = 0
+        with self._lock:
+            self._connections[topic] = self._writer.add_connection(
+                topic, type_name, typestore=typestore(), offered_qos_profiles=[qos]
+            )
+            self.counts[topic] = 0
 
     def write(self, topic: str, time_ns: int, data: bytes) -> None:
         """Append one serialized message with the time of its receipt."""
-        self._writer.write(self._connections[topic], time_ns, data)
-        self.counts[topic] += 1
+        with self._lock:
+            self._writer.write(self._connections[topic], time_ns, data)
+            self.counts[topic] += 1
 
     def close(self) -> None:
         """Write index and metadata."""
-        self._writer.close()
+        with self._lock:
+            self._writer.close()
 
     def __enter__(self) -> BagWriter:
         return self
