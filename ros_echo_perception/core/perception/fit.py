@@ -1,4 +1,4 @@
-"""Which objects explain a ping: added, refined, split, re-searched, dropped by likelihood."""
+"""Which objects explain a ping: added, refined, split, merged, dropped by likelihood."""
 
 from __future__ import annotations
 
@@ -20,8 +20,6 @@ from .search import Scan, bearing_grid, matched_filter, scan
 from .split import best_pairs, implausibility
 
 _SEED_HALF_WIDTH_M = 0.03
-_RESEARCH_HALF_WIDTH_M = 0.012
-_SWITCH_NATS = 1.0
 _CLICK_NATS = 4.0
 _RIVAL_NATS = 4.0
 _EXTRA_ROUNDS = 12
@@ -75,7 +73,6 @@ class ObjectFitter:
         self.scene = Scene(model, ping, Priors(config.velocity_sigma_m_s, config.max_bearing_rad))
         self.interference = False
         self._searches_left = config.max_pair_searches
-        self._lobe_rad = model.speed_m_s / model.receiver.carrier_hz / model.head.baseline_m
         self._reach_m = model.speed_m_s * model.pulses[0].envelope_sigma_s
 
     def fit(self, candidates: list[Candidate]) -> Explained:
@@ -83,7 +80,6 @@ class ObjectFitter:
         self._add_in_waves(candidates)
         self._split_misfits()
         self._add_from_residual()
-        self._search_again()
         self._reconsider_close()
         return self._drop_weak()
 
@@ -182,20 +178,6 @@ class ObjectFitter:
                 return
             tried.append(float(self.ping.time_s[peak]))
             self._try_add(tried[-1])
-
-    def _search_again(self) -> None:
-        """Look at each object alone, all others taken off: another lobe may fit better."""
-        for i in range(len(self.scene)):
-            if len(self.scene.cluster(i)) == 1:
-                continue
-            one = self.scene.objects.take([i])
-            here, width = float(one.range_m[0]), _RESEARCH_HALF_WIDTH_M
-            samples = self.scene.alone([i])
-            found = scan(self.model, self.ping, samples, here, width, self.bearings)
-            best_range, best_bearing, strength, _ = found.best()
-            if abs(best_bearing - float(one.bearing_rad[0])) > self._lobe_rad / 2.0:
-                other = one_object(best_range, best_bearing, strength)
-                self._try_instead([i], other, _SWITCH_NATS)
 
     def _reconsider_close(self) -> None:
         """Close objects: perhaps one explains both (one repaired the other's slip), or a better
