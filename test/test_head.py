@@ -93,10 +93,19 @@ DELETE = object()
         (("gain_mismatch_db",), math.inf, "gain_mismatch_db is inf"),
         (("latency_s",), 1.0, "latency_s is 1.0; allowed: a number from -0.01 to 0.01"),
         (("calibration",), "today", "calibration is 'today'"),
+        (("calibration", "model_error"), "small", "calibration.model_error is 'small'"),
+        (("calibration", "level_error"), -0.1, "calibration.level_error is -0.1"),
+        (("calibration", "burst_cycles"), 3.0, "calibration.burst_cycles is 3.0"),
+        (("calibration", "sigma"), [1], "calibration.sigma is [1]"),
+        (("calibration", "direct_pulse"), 1, "calibration.direct_pulse is 1"),
+        (("calibration", "direct_pulse", 0, "step_s"), 0.0, "direct_pulse[0].step_s is 0.0"),
+        (("calibration", "direct_pulse", 0, "left_real"), [0.1], "direct_pulse[0].left_real is"),
+        (("calibration", "direct_pulse", 0, "right_imag"), [0.1] * 5, "[0].right_imag is"),
     ],
 )
 def test_malformed_heads(tmp_path, where, value, message):
-    data = head_to_mapping(load_head(HEADS[0]))
+    data = head_to_mapping(load_head(UNIT if len(where) > 1 and where[0] == "calibration"
+                                     else HEADS[0]))  # fmt: skip
     section = data
     for name in where[:-1]:
         section = section[name]

@@ -105,7 +105,9 @@ def head_from_mapping(data: Any, file: str = "head") -> Head:
         gain_mismatch_db=fields.number("gain_mismatch_db", -60.0, 60.0, 0.0),
         latency_s=fields.number("latency_s", -1e-2, 1e-2, 0.0),
         phase_mismatch_rad=fields.number("phase_mismatch_rad", -math.pi, math.pi, 0.0),
-        calibration=fields.section("calibration").data if fields.has("calibration") else {},
+        calibration=_calibration(fields.section("calibration"))
+        if fields.has("calibration")
+        else {},
     )
 
 
@@ -124,6 +126,26 @@ def save_head(head: Head, path: str | Path) -> None:
     comment = "# Echo head. SI units; x forward, y left, z up; yaw positive to the left;\n"
     comment += "# origin midway between the receivers; beam and band widths full, at -3 dB.\n"
     Path(path).write_text(comment + yaml.safe_dump(head_to_mapping(head), sort_keys=False))
+
+
+def _calibration(fields: Fields) -> Mapping[str, Any]:
+    """The section as it is, once all that processing reads of it is known to be usable."""
+    fields.number("model_error", 0.0, 1.0, 0.0)
+    fields.number("level_error", 0.0, 10.0, 0.0)
+    if fields.has("burst_cycles"):
+        fields.numbers("burst_cycles", None, 0.0, 1e4)
+    if fields.has("sigma"):
+        fields.section("sigma").number("latency", 0.0, 1.0, 0.0)
+    for pulse in fields.sections("direct_pulse"):
+        pulse.number("burst_cycles", 0.0, 1e4)
+        pulse.number("first_time_s", -1.0, 1.0)
+        pulse.number("step_s", 1e-9, 1e-2)
+        count = len(pulse.numbers("left_real", None, -100.0, 100.0))
+        if count < 4:
+            raise pulse.refuse("left_real", f"{count} numbers", "4 or more")
+        for name in ("left_imag", "right_real", "right_imag"):
+            pulse.numbers(name, count, -100.0, 100.0)
+    return dict(fields.data)
 
 
 def _transducer(fields: Fields) -> Transducer:

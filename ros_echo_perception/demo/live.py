@@ -70,7 +70,7 @@ def figures_of(monitor: Monitor) -> list[tuple[str, str]]:
     pings = len(monitor.pings)
     rows = [
         ("ping rate", f"{monitor.recent_rate_hz(time.time()):.1f} Hz"),
-        ("pings", str(len(monitor.raw_received_s))),
+        ("pings", str(len(monitor.raw_published_s))),
         ("lost", str(monitor.raw_lost + monitor.unanswered)),
         ("detections per ping", f"{monitor.n_detections / pings:.2f}" if pings else "-"),
         ("echo to detections", _latency(monitor)),

@@ -71,18 +71,18 @@ class SeenMap:
 
 @dataclass
 class Monitor:
-    """Collects what the recorder receives. Times of receipt in seconds of one clock."""
+    """Collects what the recorder receives. Times are those of publishing, seconds of one clock."""
 
-    raw_received_s: dict[int, float] = field(default_factory=dict)
+    raw_published_s: dict[int, float] = field(default_factory=dict)
     raw_flags: int = 0
     pings: dict[int, SeenPing] = field(default_factory=dict)
     path: list[tuple[float, Pose2]] = field(default_factory=list)
     latest_map: SeenMap | None = None
     n_maps: int = 0
 
-    def on_raw(self, sequence: int, flags: int, received_s: float) -> None:
+    def on_raw(self, sequence: int, flags: int, published_s: float) -> None:
         """A raw echo has come."""
-        self.raw_received_s[sequence] = received_s
+        self.raw_published_s[sequence] = published_s
         self.raw_flags |= flags
 
     def on_detections(
@@ -91,10 +91,10 @@ class Monitor:
         emission_time_s: float,
         processing_time_s: float,
         detections: Iterable[SeenDetection],
-        received_s: float,
+        published_s: float,
     ) -> None:
         """The detections of one ping have come."""
-        latency_s = received_s - self.raw_received_s.get(sequence, math.nan)
+        latency_s = published_s - self.raw_published_s.get(sequence, math.nan)
         self.pings[sequence] = SeenPing(
             sequence, emission_time_s, latency_s, processing_time_s, tuple(detections)
         )
@@ -111,26 +111,26 @@ class Monitor:
     @property
     def pings_sent(self) -> int:
         """Pings the driver numbered from the first to the last one seen."""
-        received = self.raw_received_s
+        received = self.raw_published_s
         return max(received) - min(received) + 1 if received else 0
 
     @property
     def raw_lost(self) -> int:
         """Gaps in the numbers of the raw echoes."""
-        return self.pings_sent - len(self.raw_received_s)
+        return self.pings_sent - len(self.raw_published_s)
 
     @property
     def answered(self) -> int:
         """Raw echoes that were seen and became detections."""
-        return sum(1 for n in self.raw_received_s if n in self.pings)
+        return sum(1 for n in self.raw_published_s if n in self.pings)
 
     @property
     def unanswered(self) -> int:
         """Raw echoes older than the newest detections that never became detections."""
         if not self.pings:
-            return len(self.raw_received_s)
+            return len(self.raw_published_s)
         newest = max(self.pings)
-        return sum(1 for n in self.raw_received_s if n <= newest and n not in self.pings)
+        return sum(1 for n in self.raw_published_s if n <= newest and n not in self.pings)
 
     @property
     def n_detections(self) -> int:
@@ -144,12 +144,12 @@ class Monitor:
 
     def recent_rate_hz(self, now_s: float) -> float:
         """Rate of raw echoes over the last two seconds."""
-        recent = sum(1 for t in self.raw_received_s.values() if t > now_s - _RATE_WINDOW_S)
+        recent = sum(1 for t in self.raw_published_s.values() if t > now_s - _RATE_WINDOW_S)
         return recent / _RATE_WINDOW_S
 
     def mean_rate_hz(self) -> float:
         """Rate of raw echoes from the first to the last, NaN below two."""
-        times = list(self.raw_received_s.values())
+        times = list(self.raw_published_s.values())
         if len(times) < 2:
             return math.nan
         return (len(times) - 1) / (max(times) - min(times))

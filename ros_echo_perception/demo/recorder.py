@@ -5,7 +5,7 @@ from __future__ import annotations
 import importlib
 import threading
 import time
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from typing import Any
 
 import numpy as np
@@ -79,20 +79,20 @@ class Recorder(Node):
         )
         handler = self._handlers.get(type_name)
 
-        def receive(data: bytes) -> None:
-            received_ns = time.time_ns()
-            self._bag.write(topic, received_ns, data)
+        def receive(data: bytes, info: Mapping[str, int]) -> None:
+            self._bag.write(topic, time.time_ns(), data)
             if handler is not None:
                 message = deserialize_message(data, message_type)
+                # When it was published: how late this process comes to it is no one's latency.
                 with self.lock:
-                    handler(message, received_ns * 1e-9)
+                    handler(message, info["source_timestamp"] * 1e-9)
 
         self.create_subscription(message_type, topic, receive, profile, raw=True)
 
-    def _on_raw(self, message: Any, received_s: float) -> None:
-        self._monitor.on_raw(message.sequence, message.front_end_flags, received_s)
+    def _on_raw(self, message: Any, published_s: float) -> None:
+        self._monitor.on_raw(message.sequence, message.front_end_flags, published_s)
 
-    def _on_detections(self, message: Any, received_s: float) -> None:
+    def _on_detections(self, message: Any, published_s: float) -> None:
         detections = [
             SeenDetection(
                 d.range_m, d.bearing_rad, d.range_sigma_m, d.bearing_sigma_rad,
@@ -101,10 +101,10 @@ class Recorder(Node):
             for d in message.detections
         ]  # fmt: skip
         self._monitor.on_detections(
-            message.sequence, stamp_s(message), message.processing_time_s, detections, received_s
+            message.sequence, stamp_s(message), message.processing_time_s, detections, published_s
         )
 
-    def _on_map(self, message: Any, received_s: float) -> None:
+    def _on_map(self, message: Any, published_s: float) -> None:
         info = message.info
         self._monitor.on_map(
             SeenMap(
@@ -116,7 +116,7 @@ class Recorder(Node):
             )
         )
 
-    def _on_odometry(self, message: Any, received_s: float) -> None:
+    def _on_odometry(self, message: Any, published_s: float) -> None:
         sample = odometry_from_message(message)
         self._monitor.on_odometry(
             sample.time_s, Pose2(sample.pose.x_m, sample.pose.y_m, sample.pose.yaw_rad)

@@ -200,7 +200,7 @@ def _wait_for_processing(recorder: Recorder, nodes: NodeGroup, spinner: _Spinner
 def _wait_for_first_ping(monitor: Monitor, nodes: NodeGroup, spinner: _Spinner) -> float:
     """Monotonic time at which the first raw echo was there."""
     end = time.monotonic() + _START_TIMEOUT_S
-    while not monitor.raw_received_s:
+    while not monitor.raw_published_s:
         nodes.check()
         spinner.check()
         if time.monotonic() > end:
@@ -228,7 +228,7 @@ def _watch(
         parameters.update(reader.read())
         write_parameters(parameters, plan.out / "parameters.yaml")
 
-    begin = min(monitor.raw_received_s.values())
+    begin = min(monitor.raw_published_s.values())
     with LiveView(console, plan.seconds) as view:
         while (elapsed := time.time() - begin) < plan.seconds:
             nodes.check()
@@ -237,7 +237,7 @@ def _watch(
                 note_parameters()
             with recorder.lock:
                 view.update(monitor, elapsed)
-                silent_s = time.time() - max(monitor.raw_received_s.values())
+                silent_s = time.time() - max(monitor.raw_published_s.values())
             if silent_s > _SILENCE_S:
                 console.print(f"The drive has ended after {elapsed - silent_s:.1f} s.")
                 break

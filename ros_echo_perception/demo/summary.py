@@ -56,7 +56,7 @@ def _traffic(monitor: Monitor, first_ping_s: float) -> list[Figure]:
     return [
         Figure("first_ping_s", "start to first ping", first_ping_s, "s"),
         Figure("pings_sent", "pings sent", monitor.pings_sent),
-        Figure("pings_received", "pings received", len(monitor.raw_received_s)),
+        Figure("pings_received", "pings received", len(monitor.raw_published_s)),
         Figure("pings_answered", "pings answered with detections", monitor.answered),
         Figure("messages_lost", "messages lost", monitor.raw_lost + monitor.unanswered),
         Figure("ping_rate_hz", "ping rate", monitor.mean_rate_hz(), "Hz"),

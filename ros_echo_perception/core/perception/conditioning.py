@@ -36,8 +36,8 @@ class Conditioned:
         complex, shape (2, n), the direct pulse taken off.
     weight
         shape (2, n): 1 / standard deviation of the complex noise plus what the models of the
-        direct pulse and of strong echoes may leave; 0 where nothing is known (clipped, blanked,
-        dead ear).
+        direct pulse and of strong echoes may leave; little where clipped, 0 where nothing is
+        known (blanked, dead ear).
     noise_sigma
         (left, right) complex standard deviation of the plain noise; NaN for a dead ear.
     alive
@@ -72,7 +72,6 @@ def condition(
     ]
     alive = _alive(baseband, echo, noise)
     samples = baseband.samples.copy()
-    variance = np.empty(samples.shape)
     weight = np.zeros(samples.shape)
     blanking_end = 0.0
     reach = max(1, int(round(_CLIP_REACH_S / baseband.step_s)))
@@ -85,16 +84,16 @@ def condition(
         )
         samples[ear] -= direct.samples
         strong = maximum_filter1d(np.abs(samples[ear]), 3)
-        variance[ear] = (
+        variance = (
             profile**2
             + direct.error**2
             + (model_error * strong) ** 2
             + (_CLIP_ERROR * binary_dilation(baseband.clipped[ear], iterations=reach)) ** 2
         )
         # A clipped sample still says when it was loud; by how much, it does not.
-        variance[ear] += np.where(baseband.clipped[ear], (_CLIPPED_ERROR * strong) ** 2, 0.0)
+        variance += np.where(baseband.clipped[ear], (_CLIPPED_ERROR * strong) ** 2, 0.0)
         known = baseband.time_s > direct.covered_s
-        weight[ear] = np.where(known, 1.0 / np.sqrt(variance[ear]), 0.0)
+        weight[ear] = np.where(known, 1.0 / np.sqrt(variance), 0.0)
         blanking_end = max(blanking_end, direct.covered_s)
     return Conditioned(
         samples=samples,
